@@ -1,0 +1,1 @@
+"""Forward models: parameters and a wavelength grid to heights and depths."""

@@ -1,0 +1,10 @@
+"""Files to depth spectra, with exact complaints.
+
+`formats` decides the format and returns a raw table, `rows` picks planet and reference, `columns` recognises
+columns, `quantities` knows units, `bins` the wavelength axis; `spectrum` puts them together.
+"""
+
+from transit.readers.options import DEPTH_UNITS, WAVELENGTH_UNITS, WIDTH_KINDS, ReadOptions
+from transit.readers.spectrum import read_depth_table
+
+__all__ = ["DEPTH_UNITS", "WAVELENGTH_UNITS", "WIDTH_KINDS", "ReadOptions", "read_depth_table"]

@@ -1,0 +1,158 @@
+"""Ensemble sampling with emcee: the only module that knows that package, its moves and its random state."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+
+import emcee
+import numpy as np
+
+from transit.mixtures import Mixture
+
+
+@dataclass(frozen=True, eq=False)
+class EnsembleChain:
+    """Positions of W walkers over S steps.
+
+    Parameters
+    ----------
+    positions : np.ndarray
+        Shape (S, W, D).
+    ln_prob : np.ndarray
+        Shape (S, W), log probability at each position.
+    acceptance : float
+        Mean share of accepted proposals.
+    """
+
+    positions: np.ndarray
+    ln_prob: np.ndarray
+    acceptance: float
+
+
+def child_sequence(parent: np.random.SeedSequence, *path: int) -> np.random.SeedSequence:
+    """Child of a seed sequence at a fixed place of its tree.
+
+    Unlike `parent.spawn`, which counts its calls, this gives the same child each time, so that using one parent
+    twice repeats the numbers.
+    """
+    return np.random.SeedSequence(
+        parent.entropy, spawn_key=(*parent.spawn_key, *path), pool_size=parent.pool_size
+    )
+
+
+def sampler_state(sequence: np.random.SeedSequence) -> tuple:
+    """State in the old numpy format, the only form of seed that emcee 3.1 takes without ignoring it."""
+    return np.random.RandomState(np.random.MT19937(sequence)).get_state()
+
+
+def prior_mix() -> list[tuple[emcee.moves.Move, float]]:
+    """Moves for a start without knowledge of the target: stretch 0.3, differential evolution 0.5, snooker 0.2.
+
+    Goodman & Weare 2010; ter Braak 2006; ter Braak & Vrugt 2008.
+    """
+    return [
+        (emcee.moves.StretchMove(), 0.3),
+        (emcee.moves.DEMove(), 0.5),
+        (emcee.moves.DESnookerMove(), 0.2),
+    ]
+
+
+def independence_mix(proposal: Mixture, bank: np.ndarray) -> list[tuple[emcee.moves.Move, float]]:
+    """Moves for a target that a mixture already resembles: independence 0.35, evolution 0.4, stretch 0.25.
+
+    Parameters
+    ----------
+    proposal : Mixture
+        Density of the independence proposals.
+    bank : np.ndarray
+        Shape (M, D), draws from it, used one after the other; more than the chain can use.
+
+    Returns
+    -------
+    list of (Move, float)
+
+    Notes
+    -----
+    Independence Metropolis-Hastings: Tierney 1994, Ann. Stat. 22, 1701; acceptance carries ln q(x) - ln q(x').
+    The proposals come from a bank drawn beforehand, so their density is evaluated in one block.
+    """
+    ln_bank = proposal.ln_density(bank)
+    used = 0
+
+    def propose(coords: np.ndarray, _random: np.random.RandomState) -> tuple[np.ndarray, np.ndarray]:
+        nonlocal used
+        rows = slice(used, used + len(coords))
+        used += len(coords)
+        return bank[rows].copy(), proposal.ln_density(coords) - ln_bank[rows]
+
+    return [
+        (emcee.moves.MHMove(propose), 0.35),
+        (emcee.moves.DEMove(), 0.4),
+        (emcee.moves.StretchMove(), 0.25),
+    ]
+
+
+def run_ensemble(
+    ln_prob: Callable[[np.ndarray], np.ndarray],
+    start: np.ndarray,
+    n_steps: int,
+    sequence: np.random.SeedSequence,
+    moves: list[tuple[emcee.moves.Move, float]],
+) -> EnsembleChain:
+    """Run an ensemble sampler from given positions.
+
+    Parameters
+    ----------
+    ln_prob : callable
+        Maps (W, D) to (W,) log probabilities, finite or -inf.
+    start : np.ndarray
+        Shape (W, D), W even and at least 2 D.
+    n_steps : int
+        Number of steps S.
+    sequence : np.random.SeedSequence
+        Seed of this chain; the global random state is neither used nor changed.
+    moves : list of (Move, float)
+        Moves and their shares.
+
+    Returns
+    -------
+    EnsembleChain
+    """
+    n_walkers, n_dim = start.shape
+    sampler = emcee.EnsembleSampler(n_walkers, n_dim, ln_prob, moves=moves, vectorize=True)
+    sampler.random_state = sampler_state(sequence)
+    # emcee refuses starts that are strongly correlated; narrow posteriors are just that, and the moves cope.
+    sampler.run_mcmc(start.copy(), n_steps, skip_initial_state_check=True, progress=False)
+    return EnsembleChain(
+        sampler.get_chain(), sampler.get_log_prob(), float(np.mean(sampler.acceptance_fraction))
+    )
+
+
+def autocorrelation_steps(series: np.ndarray) -> float:
+    """Longest integrated autocorrelation time of an ensemble, in steps.
+
+    Parameters
+    ----------
+    series : np.ndarray
+        Shape (S, W) or (S, W, D).
+
+    Returns
+    -------
+    float
+        At least 1. Biased low when the chain is shorter than about 50 times the result; `inf` when a walker or
+        the whole ensemble never moved.
+
+    Notes
+    -----
+    Sokal's windowed estimate averaged over the walkers (Goodman & Weare 2010), as in emcee.
+    """
+    series = series[:, :, None] if series.ndim == 2 else series
+    # A constant walker has no autocorrelation function: it would turn the average into 0/0.
+    if len(series) < 2 or np.any(np.ptp(series, axis=0) == 0):
+        moving = np.all(np.ptp(series, axis=0) > 0, axis=1) if len(series) > 1 else np.zeros(1, dtype=bool)
+        if moving.sum() < 2:
+            return np.inf
+        series = series[:, moving]
+    times = emcee.autocorr.integrated_time(series, tol=0, quiet=True)
+    return float(max(1.0, np.max(times)))
