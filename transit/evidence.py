@@ -46,6 +46,11 @@ _POSTERIOR_DRAWS = 2000
 _STRATA = 5
 # Temperatures between prior and posterior; a peak of ln L = 10 000 takes about 20.
 _MAX_STAGES = 40
+_BURN_SEGMENTS = 5
+# Largest number of chain draws in a fit.
+_FIT_DRAWS = 3000
+# Chain draws are correlated: the criterion that chooses the number of components counts one in this many.
+CHAIN_THIN = 5.0
 # An evidence rests on at least this effective number of weighted draws.
 MIN_EFFECTIVE_SIZE = 300.0
 # One draw that carries more than this share of the weight is a sign of a region that the mixture misses.
@@ -114,7 +119,7 @@ class SamplerSettings:
         """For results: at most about 35 000 likelihood calls per seed for D <= 4, 120 000 for D >= 10."""
         return cls(
             few=Budget(1000, 10, 48, 60, 12, 2, 2000, 150, 4000, 4, 0.02),
-            many=Budget(2000, 12, 100, 120, 25, 3, 5000, 200, 10000, 4, 0.04),
+            many=Budget(2000, 12, 100, 150, 20, 3, 4000, 250, 10000, 4, 0.04),
         )
 
     @classmethod
@@ -414,34 +419,65 @@ def _explore(
         raise EvidenceError(
             f"The likelihood is zero at all {budget.pool} draws from the prior: check the priors and the model."
         )
-    fit_draws, fit_ln_weights = pool.draws, np.zeros(budget.pool)
     points, ln_like, power, goal = pool.draws, pool.ln_like, 0.0, min(budget.walkers, budget.pool // 4)
+    guide = None
     for stage in range(_MAX_STAGES):
         rise = (1 - power) * tempering_power((1 - power) * ln_like, goal)
-        # The last stage goes all the way: beyond it lies only the correction by importance weights.
+        # The last stage goes all the way: importance weights correct what it misses.
         power = 1.0 if power + rise > 0.999 or stage == _MAX_STAGES - 1 else power + rise
-        ln_weights = rise * ln_like
-        walkers = _resample_walkers(points, ln_weights, budget.walkers, rng)
-        if stage == 0:
-            fit_ln_weights = ln_weights
-        n_steps = budget.burn_steps if power == 1.0 else budget.stage_steps
-        chain = sampling.run_ensemble(
-            partial(_tempered, target, power),
-            walkers,
-            n_steps,
-            sampling.child_sequence(sequence, stage),
-            _guided_moves(fit_draws, fit_ln_weights, n_steps * budget.walkers, rng),
-        )
+        walkers = _resample_walkers(points, rise * ln_like, budget.walkers, rng)
+        if guide is None:
+            guide = _fit_guide(points, rise * ln_like, rng)
         if power == 1.0:
             break
-        later = slice(n_steps // 2, None)
-        fit_draws = chain.positions[later].reshape(-1, target.n_dim)
-        fit_ln_weights = np.zeros(len(fit_draws))
+        chain = _segment(target, power, walkers, guide, budget.stage_steps, sequence, (0, stage), rng)
+        later = chain.positions[budget.stage_steps // 2 :].reshape(-1, target.n_dim)
+        guide = _fit_guide(later, np.zeros(len(later)), rng)
         points, goal = chain.positions[-1], budget.walkers // 2
         ln_like = (chain.ln_prob[-1] - _ln_standard_normal(points)) / power
-    positions, ln_prob = _hooked(hook, "burn-in", chain, target)
-    later = slice(budget.burn_steps // 2, None)
-    return positions[later].reshape(-1, target.n_dim), ln_prob[later].reshape(-1)
+    return _burn_in(target, walkers, guide, budget, sequence, rng, hook)
+
+
+def _burn_in(
+    target: _Target,
+    walkers: np.ndarray,
+    guide: Mixture,
+    budget: Budget,
+    sequence: np.random.SeedSequence,
+    rng: np.random.Generator,
+    hook: ChainHook | None,
+) -> tuple[np.ndarray, np.ndarray]:
+    """Chain at power 1 in segments, each guided by a fit to the ones before; its later half and ln posterior."""
+    positions, ln_prob = [], []
+    for part in range(_BURN_SEGMENTS):
+        n_steps = max(2, budget.burn_steps // _BURN_SEGMENTS)
+        chain = _segment(target, 1.0, walkers, guide, n_steps, sequence, (1, part), rng)
+        positions.append(chain.positions)
+        ln_prob.append(chain.ln_prob)
+        walkers = chain.positions[-1]
+        if part < _BURN_SEGMENTS - 1:
+            recent = np.concatenate(positions[part // 2 :]).reshape(-1, target.n_dim)
+            guide = _fit_guide(recent, np.zeros(len(recent)), rng)
+    chain = sampling.EnsembleChain(np.concatenate(positions), np.concatenate(ln_prob), chain.acceptance)
+    seen, ln_seen = _hooked(hook, "burn-in", chain, target)
+    later = slice(len(seen) // 2, None)
+    return seen[later].reshape(-1, target.n_dim), ln_seen[later].reshape(-1)
+
+
+def _segment(
+    target: _Target,
+    power: float,
+    walkers: np.ndarray,
+    guide: Mixture,
+    n_steps: int,
+    sequence: np.random.SeedSequence,
+    path: tuple[int, ...],
+    rng: np.random.Generator,
+) -> sampling.EnsembleChain:
+    """One short chain at one power, with moves from a mixture."""
+    moves = sampling.guided_moves(guide, len(walkers), n_steps, rng)
+    child = sampling.child_sequence(sequence, *path)
+    return sampling.run_ensemble(partial(_tempered, target, power), walkers, n_steps, child, moves)
 
 
 def _tempered(target: _Target, power: float, z: np.ndarray) -> np.ndarray:
@@ -452,15 +488,13 @@ def _tempered(target: _Target, power: float, z: np.ndarray) -> np.ndarray:
     return ln_prior + power * (target.ln_posterior(z) - ln_prior)
 
 
-def _guided_moves(
-    draws: np.ndarray, ln_weights: np.ndarray, n_proposals: int, rng: np.random.Generator
-) -> list:
-    """Moves with independence proposals from a mixture fitted to weighted draws."""
+def _fit_guide(draws: np.ndarray, ln_weights: np.ndarray, rng: np.random.Generator) -> Mixture:
+    """Mixture that guides the moves of a chain, fitted to weighted draws (N, D)."""
     weights = _relative(ln_weights)
-    used = weights > 1e-4
-    core = choose_mixture(draws[used], weights[used], rng, sizes=(1, 2, 3, 4, 6, 8), dof=5.0)
-    guide = _with_safety(core.widened(1.2), None, prior_share=0.1, peak_share=0.0)
-    return sampling.independence_mix(guide, guide.draw(n_proposals, rng))
+    used = np.flatnonzero(weights > 1e-4)
+    used = rng.permutation(used)[:_FIT_DRAWS]
+    core = choose_mixture(draws[used], weights[used], rng, sizes=(1, 2, 3, 4, 6, 8), dof=5.0, thin=CHAIN_THIN)
+    return _with_safety(core.widened(1.2), None, prior_share=0.1, peak_share=0.0)
 
 
 def tempering_power(ln_like: np.ndarray, size: float) -> float:
@@ -702,11 +736,11 @@ def _adapt(
     """
     # Walkers stuck far below the rest would only waste components.
     near = np.flatnonzero(ln_explored > ln_explored.max() - 3 * pool.target.n_dim - 10)
-    near = rng.permutation(near)[:2500]
+    near = rng.permutation(near)[:_FIT_DRAWS]
     chain_draws = explored[near]
     for _ in range(budget.rounds):
         draws, shares = _fit_set(pool, chain_draws)
-        core = choose_mixture(draws, shares, rng, dof=3.0)
+        core = choose_mixture(draws, shares, rng, dof=3.0, thin=CHAIN_THIN)
         # Early proposals are wide: a draw too many costs little, a region without draws is lost.
         proposal = _with_safety(core.widened(1.5), peaks, prior_share=0.1, peak_share=0.2)
         own = importance_estimate(pool.add(proposal, budget.round_draws, rng))
@@ -719,7 +753,7 @@ def _fit_set(pool: _Pool, chain_draws: np.ndarray) -> tuple[np.ndarray, np.ndarr
     """Draws (N, D) and shares (N,) for a fit: a chain, and the pool with as much say as its effective size."""
     ln_weights = truncate(pool.ln_weights())
     weights = _relative(ln_weights)
-    trust = min(effective_size(weights), 3000.0)
+    trust = min(effective_size(weights) * CHAIN_THIN, float(_FIT_DRAWS))
     used = weights > 1e-6
     shares = trust * weights[used] / weights.sum()
     return np.vstack([chain_draws, pool.draws[used]]), np.concatenate([np.ones(len(chain_draws)), shares])
@@ -754,15 +788,12 @@ def _produce(
 ) -> sampling.EnsembleChain:
     """Production chain, started from the weighted draws."""
     start = _resample_walkers(pool.draws, truncate(pool.ln_weights()), budget.walkers, rng)
-    # Independence proposals are used in a random 35 % of the steps; ten standard deviations above that.
-    bank_steps = int(0.35 * budget.production_steps + 5 * np.sqrt(budget.production_steps)) + 1
-    bank = wide.draw(bank_steps * budget.walkers, rng)
     chain = sampling.run_ensemble(
         pool.target.ln_posterior,
         start,
         budget.production_steps,
         sequence,
-        sampling.independence_mix(wide, bank),
+        sampling.guided_moves(wide, budget.walkers, budget.production_steps, rng),
     )
     positions, ln_prob = _hooked(hook, "production", chain, pool.target)
     return replace(chain, positions=positions, ln_prob=ln_prob)
@@ -772,9 +803,9 @@ def _final_mixture(
     pool: _Pool, first_half: np.ndarray, peaks: Mixture | None, rng: np.random.Generator
 ) -> Mixture:
     """Proposal of the estimates, from the first half of the chain (S, W, D) and the weighted draws."""
-    chain_draws = rng.permutation(first_half.reshape(-1, pool.target.n_dim))[:3000]
+    chain_draws = rng.permutation(first_half.reshape(-1, pool.target.n_dim))[:_FIT_DRAWS]
     draws, shares = _fit_set(pool, chain_draws)
-    core = choose_mixture(draws, shares, rng, sizes=(1, 2, 3, 4, 6, 8, 12, 16), dof=5.0)
+    core = choose_mixture(draws, shares, rng, sizes=(1, 2, 3, 4, 6, 8, 12, 16), dof=5.0, thin=CHAIN_THIN)
     return _with_safety(core, peaks, prior_share=0.05, peak_share=0.05)
 
 

@@ -155,6 +155,57 @@ class Mixture:
             points[rows] = self.means[k] + stretched
         return points[rng.permutation(n_draws)]
 
+    def draw_block(
+        self, z: np.ndarray, block: np.ndarray, rng: np.random.RandomState
+    ) -> np.ndarray:
+        """Replace some coordinates of points by draws from the mixture conditional on the others.
+
+        Parameters
+        ----------
+        z : np.ndarray
+            Shape (N, D).
+        block : np.ndarray
+            Shape (B,), distinct coordinates to replace, 1 <= B <= D.
+        rng : np.random.RandomState
+            Source of randomness, of the old kind that emcee hands to its moves.
+
+        Returns
+        -------
+        np.ndarray
+            Shape (N, D).
+
+        Notes
+        -----
+        With R the other coordinates, a component's conditional is a t with dof + |R| degrees of freedom and the
+        Gaussian conditional scale times (dof + d_R)/(dof + |R|), d_R the squared distance in R (Ding 2016,
+        Am. Stat. 70, 293). The ratio of conditional densities equals that of the joint ones, as R is the same.
+        """
+        rest = np.setdiff1d(np.arange(self.n_dim), block)
+        if len(rest) == 0:
+            joint = np.broadcast_to(np.log(self.weights)[:, None], (self.n_components, len(z)))
+            distance = np.zeros(joint.shape)
+        else:
+            marginal = Mixture(
+                self.weights, self.means[:, rest], self.scales[:, rest[:, None], rest], self.dof
+            )
+            distance = marginal.squared_distance(z[:, rest])
+            joint = marginal.ln_component_density(distance) + np.log(self.weights)[:, None]
+        edges = np.cumsum(np.exp(joint - joint.max(axis=0)), axis=0)
+        member = np.sum(edges < rng.random_sample(len(z)) * edges[-1], axis=0)
+        to_block = self.scales[:, block[:, None], rest]
+        slope = np.linalg.solve(self.scales[:, rest[:, None], rest], np.swapaxes(to_block, 1, 2))  # (K, R, B)
+        spread = np.linalg.cholesky(self.scales[:, block[:, None], block] - np.matmul(to_block, slope))
+        offset = np.einsum("nr,nrb->nb", z[:, rest] - self.means[:, rest][member], slope[member])
+        noise = np.einsum("nij,nj->ni", spread[member], rng.standard_normal((len(z), len(block))))
+        dof = self.dof[member]
+        heavy = np.isfinite(dof)
+        if np.any(heavy):
+            chi2 = rng.chisquare(dof[heavy] + len(rest))
+            noise[heavy] *= np.sqrt((dof[heavy] + distance[member, np.arange(len(z))][heavy]) / chi2)[:, None]
+        drawn = z.copy()
+        drawn[:, block] = self.means[:, block][member] + offset + noise
+        return drawn
+
     def widened(self, factor: float, dof: float | None = None) -> Mixture:
         """Copy with every scale matrix multiplied by `factor` and, if given, other degrees of freedom."""
         return Mixture(self.weights, self.means, self.scales * factor, self.dof if dof is None else dof)
@@ -379,6 +430,7 @@ def choose_mixture(
     *,
     sizes: tuple[int, ...] = (1, 2, 3, 4, 6, 8),
     dof: float = 5.0,
+    thin: float = 1.0,
 ) -> Mixture:
     """Fit mixtures of several sizes and keep the one with the lowest Bayesian information criterion.
 
@@ -394,6 +446,8 @@ def choose_mixture(
         Numbers of components to try, ascending; the search ends after two sizes without improvement.
     dof : float, optional
         Degrees of freedom of all components.
+    thin : float, optional
+        The criterion counts one in this many draws, for draws that are correlated.
 
     Returns
     -------
@@ -405,7 +459,7 @@ def choose_mixture(
     K (D + 1)(D + 2)/2 - 1 free numbers of the mixture.
     """
     n_dim = draws.shape[1]
-    n_effective = effective_size(weights)
+    n_effective = max(effective_size(weights) / thin, 2.0)
     best, best_bic, failures = None, np.inf, 0
     for size in sizes:
         guess = spread_start(draws, weights, size, dof, rng)

@@ -13,8 +13,7 @@ from transit.opacity import OpacityTable, available, load_table
 from transit.records import DepthSpectrum, Priors, System
 
 MOST_DEFAULT_SPECIES = 6
-# Fewer bins than this inside trusted bands cannot show a species.
-FEWEST_BINS_IN_BANDS = 2
+FEWEST_BINS_IN_BANDS = 1
 
 
 @dataclass(frozen=True)
@@ -146,7 +145,7 @@ def _why_untested(name: str, table: OpacityTable, count: int, temperature_k: flo
     )
     return (
         f"{name}: {count} bins lie inside bands where its table is trusted at {temperature_k:.0f} K "
-        f"(trusted: {ranges}); at least {FEWEST_BINS_IN_BANDS} are needed."
+        f"(trusted: {ranges}); at least one is needed."
     )
 
 

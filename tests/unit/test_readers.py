@@ -4,6 +4,8 @@ from __future__ import annotations
 
 import gzip
 import hashlib
+import subprocess
+import sys
 from contextlib import suppress
 from pathlib import Path
 
@@ -16,7 +18,7 @@ from transit.errors import InputFileError, SettingError
 from transit.readers import ReadOptions, read_depth_table
 from transit.readers.bins import fill_half_widths, kind_from_spacing, spacing_ratio
 from transit.readers.cells import is_missing, parse_number
-from transit.readers.columns import describe
+from transit.readers.names import describe
 from transit.readers.quantities import format_number, standard_unit
 from transit.records import System
 
@@ -372,6 +374,12 @@ class TestNames:
         assert "There is no column 'D' as --depth-column asks; its columns are 'wavelength_um'" in message
 
 
+class TestImport:
+    def test_astropy_is_loaded_only_to_read(self):
+        code = "import sys, transit.readers; sys.exit('astropy' in sys.modules or 'pandas' in sys.modules)"
+        assert subprocess.run([sys.executable, "-c", code], cwd=DATA.parents[1], check=False).returncode == 0
+
+
 class TestUnits:
     def test_wavelength_unit_is_never_guessed(self, refused):
         message = refused(table(header="wave,half_width,depth_ppm,err"))
@@ -453,6 +461,19 @@ class TestUnits:
             spectrum.wavelength_um[0] - spectrum.half_width_um[0], 1e4 / 8250, rtol=1e-12
         )
         assert "falling order of wavelength" in notes_of(spectrum)
+
+    def test_width_in_another_unit_than_the_wavelength(self, read):
+        rows = [f"1.{i},100,10000,5{i}" for i in range(4)]
+        spectrum = read(table(rows, "wl_um,width_nm,depth_ppm,err"))
+        np.testing.assert_allclose(spectrum.half_width_um, 0.05)
+        wide = [f"{nu},100,10000,5{i}" for i, nu in enumerate((8000, 7900, 7800))]
+        spectrum = read(table(wide, "wavenumber,width,depth_ppm,err"))
+        np.testing.assert_allclose(np.diff(spectrum.wavelength_um), [0.0160, 0.0164], atol=3e-4)
+
+    def test_width_wider_than_the_wavenumber(self, refused):
+        rows = ["8000,9000,10000,50", "7900,50,10000,50", "7800,50,10000,51"]
+        message = refused(table(rows, "wavenumber,half_width,depth_ppm,err"))
+        assert message.startswith("spectrum.csv, line 2: half_width is 9000 cm-1 from centre to edge")
 
     def test_number_format(self):
         assert [format_number(v) for v in (0.0, 1061.3, 106900.0, 1.25, 1e-9)] == [
@@ -548,7 +569,7 @@ class TestBins:
     def test_repeated_centre_and_overlap(self, read):
         spectrum = read(table([*ROWS, "1.2,0.05,10500,51"]))
         assert spectrum.n_bins == 5
-        assert "1 centre wavelengths repeat (1.2 um), within one segment" in notes_of(spectrum)
+        assert "1 centre wavelength repeats (1.2 um), within one segment" in notes_of(spectrum)
         assert "1 of 4 pairs of neighbouring bins overlap; the overlap fraction is 20.0 per cent" in notes_of(
             spectrum
         )

@@ -150,18 +150,15 @@ class LimbModel:
         density_cm3 = (
             np.exp(self.node_ln_bar) * 1e-1 / (BOLTZMANN_J_K * self.temperature_k[:, None])
         )  # ideal gas: P / kT, with P in bar
+        used = np.unique(np.concatenate(self.grid.bands))
         for pair, share in pairs.items():
             if share > 0:
-                table = load_table(pair, tables)
-                ln_cm5 = np.stack(
-                    [
-                        np.average(
-                            interpolate_temperatures(table, bands, self.temperature_k)[:, :, 0, 0], 0, w
-                        )
-                        for bands, w in zip(self.grid.bands, self.grid.band_weights, strict=True)
-                    ]
-                )
-                total += share * density_cm3[:, :, None] * np.exp(ln_cm5.T)[:, None, :]
+                ln_cm5 = interpolate_table(load_table(pair, tables), used, self.temperature_k)[:, :, 0, 0]
+                by_cell = [
+                    np.average(ln_cm5[np.searchsorted(used, bands)], axis=0, weights=weights)
+                    for bands, weights in zip(self.grid.bands, self.grid.band_weights, strict=True)
+                ]
+                total += share * density_cm3[:, :, None] * np.exp(np.stack(by_cell).T)[:, None, :]
         return total / CROSS_SECTION_UNIT_CM2
 
     def heights(self, state: LimbState, use: np.ndarray | None = None) -> tuple[np.ndarray, np.ndarray]:
@@ -339,17 +336,45 @@ def _cubic_at(polynomial, level, half):
     return value, response
 
 
-def interpolate_temperatures(table: OpacityTable, bands: np.ndarray, temperature_k: np.ndarray) -> np.ndarray:
-    """ln cross section of chosen bands at chosen temperatures, shape (B, T, P, S); very small where not covered.
+def interpolate_table(
+    table: OpacityTable,
+    bands: np.ndarray,
+    temperature_k: np.ndarray,
+    ln_pressure_bar: np.ndarray | None = None,
+) -> np.ndarray:
+    """ln cross section of chosen bands at chosen temperatures and pressures.
 
-    Monotone cubic in ln T between the nodes of the table, held constant beyond its first and last node.
+    Parameters
+    ----------
+    table : OpacityTable
+    bands : ndarray of int, shape (B,)
+        Indices on the common grid; where the table has none the result is very small.
+    temperature_k : ndarray, shape (T,)
+        Increasing. Held constant beyond the first and last node of the table.
+    ln_pressure_bar : ndarray, shape (J,), optional
+        None keeps the table's own nodes.
+
+    Returns
+    -------
+    ndarray, shape (B, T, J, S)
+
+    Notes
+    -----
+    Monotone cubics in ln P and in ln T between the nodes.
     """
-    out = np.full((len(bands), len(temperature_k), *table.ln_cross_section.shape[2:]), LN_FLOOR)
+    grid_k = table.temperature_k
+    wanted = np.clip(temperature_k, grid_k[0], grid_k[-1])
+    # Nodes further than two steps away do not matter to the curve.
+    first = max(int(np.searchsorted(grid_k, wanted[0], "right")) - 3, 0)
+    last = min(int(np.searchsorted(grid_k, wanted[-1])) + 3, len(grid_k))
     row = bands - table.first_band
     covered = (row >= 0) & (row < table.n_bands)
-    if np.any(covered):
-        curve = PchipInterpolator(np.log(table.temperature_k), table.ln_cross_section[row[covered]], axis=1)
-        out[covered] = curve(np.log(np.clip(temperature_k, table.temperature_k[0], table.temperature_k[-1])))
+    values = table.ln_cross_section[row[covered], first:last]
+    if ln_pressure_bar is not None:
+        values = PchipInterpolator(np.log(table.pressure_bar), values, axis=2)(ln_pressure_bar)
+    values = PchipInterpolator(np.log(grid_k[first:last]), values, axis=1)(np.log(wanted))
+    out = np.full((len(bands), *values.shape[1:]), LN_FLOOR)
+    out[covered] = values
     return out
 
 
@@ -358,8 +383,7 @@ def cell_cross_sections(
 ) -> np.ndarray:
     """ln cross section (cm2) of one species in every cell, shape (C, T, J, SLICES), slices in increasing order."""
     used = np.unique(np.concatenate(grid.bands))
-    ln_k = interpolate_temperatures(table, used, temperature_k)
-    ln_k = PchipInterpolator(np.log(table.pressure_bar), ln_k, axis=2)(ln_pressure_bar)
+    ln_k = interpolate_table(table, used, temperature_k, ln_pressure_bar)
     out = np.empty((len(grid.bands), len(temperature_k), len(ln_pressure_bar), SLICES))
     for cell, (bands, weights) in enumerate(zip(grid.bands, grid.band_weights, strict=True)):
         values = ln_k[np.searchsorted(used, bands)]

@@ -1,7 +1,8 @@
 """Files to depth spectra, with exact complaints.
 
-`formats` decides the format and returns a raw table, `rows` picks planet and reference, `columns` recognises
-columns, `quantities` knows units, `bins` the wavelength axis; `spectrum` puts them together.
+`formats` decides the format and returns a raw table, `rows` picks planet and reference, `names` and `columns`
+recognise columns, `quantities` and `settled` know units, `wavelengths`, `bins` and `depths` read the numbers;
+`spectrum` puts them together.
 """
 
 from transit.readers.options import DEPTH_UNITS, WAVELENGTH_UNITS, WIDTH_KINDS, ReadOptions

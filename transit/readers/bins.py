@@ -179,4 +179,5 @@ def repeated_note(centre_um, segment, names) -> list[str]:
             if len(names) == 1 or within == len(same)
             else f"{within} of them in one segment"
         )
-    return [f"{len(same)} centre wavelengths repeat ({listed} um), {where}; all rows are kept."]
+    what = "centre wavelength repeats" if len(same) == 1 else "centre wavelengths repeat"
+    return [f"{len(same)} {what} ({listed} um), {where}; all rows are kept."]

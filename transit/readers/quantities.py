@@ -64,6 +64,11 @@ def to_um(values: np.ndarray, unit: str) -> np.ndarray:
     return values * _TO_UM[unit]
 
 
+def from_um(values_um: np.ndarray, unit: str) -> np.ndarray:
+    """Convert wavelengths in micrometre, shape (N,), to another unit, or to wavenumbers in cm-1."""
+    return WAVENUMBER_UM / values_um if unit == "cm-1" else values_um / _TO_UM[unit]
+
+
 def to_fraction(values: np.ndarray, unit: str) -> np.ndarray:
     """Convert depths, shape (N,), to fractions; "radius-ratio" is squared."""
     return values**2 if unit == "radius-ratio" else values * _TO_FRACTION[unit]

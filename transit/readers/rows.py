@@ -28,6 +28,12 @@ def same_planet(first: str, second: str) -> bool:
     return _folded(first) == _folded(second)
 
 
+def may_be_same_planet(first: str, second: str) -> bool:
+    """Compare as `same_planet`, but let a header name the star alone ("WASP-39" for "WASP-39 b")."""
+    short, long = sorted((_folded(first), _folded(second)), key=len)
+    return short == long or (long[:-1] == short and long[-1:].isalpha())
+
+
 def select_rows(table: RawTable, options: ReadOptions) -> tuple[RawTable, str, str]:
     """Reduce a table to one planet and one reference.
 
@@ -82,7 +88,7 @@ def _select_planet(table: RawTable, wanted: str | None) -> tuple[RawTable, str]:
     name, texts = _distinct(table, "planet")
     if name is None:
         planet = next((table.meta[key] for key in _PLANET_KEYS if table.meta.get(key)), "")
-        if wanted and planet and not same_planet(wanted, planet):
+        if wanted and planet and not may_be_same_planet(wanted, planet):
             raise table.refusal(f"--planet is {wanted!r}, but the header says that the planet is {planet!r}.")
         if wanted and not planet:
             raise table.refusal(
