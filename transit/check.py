@@ -6,6 +6,7 @@ import time
 from collections.abc import Callable
 from concurrent.futures import Executor, ProcessPoolExecutor, as_completed
 from dataclasses import asdict, replace
+from itertools import pairwise
 from pathlib import Path
 
 import numpy as np
@@ -18,7 +19,7 @@ from transit.hypotheses import Hypothesis, limb_state, physical, sampled_hypothe
 from transit.linear import linear_posterior
 from transit.opacity import load_table
 from transit.problem import FitTask, Problem, run_fit, share_model
-from transit.records import CheckResult, DepthSpectrum, Fit, Interval, System
+from transit.records import CheckResult, DepthSpectrum, Fit, Interval, System, offset_name
 from transit.species import Selection, select_species
 from transit.units import JUPITER_RADIUS_M, PPM
 from transit.verdict import best_model, best_null, build_comparisons, judge
@@ -104,7 +105,7 @@ def check_spectrum(
             own_pool.shutdown(cancel_futures=True)
 
     comparisons = build_comparisons(fits, inflated, selection.species)
-    verdict = judge(comparisons, selection.species, selection.untested, fits)
+    verdict = judge(comparisons, selection.species, selection.untested, fits, inflated)
     fine_um, fits = _with_fine_models(problem, hypotheses, fits)
     height = scale_height_m(
         system.equilibrium_temperature_k, background_molecular_weight(system.background), problem.gravity
@@ -127,7 +128,7 @@ def check_spectrum(
             for name in selection.species
         },
         warnings=selection.notes + _warnings(problem, fits, bool(inflated)),
-        timing={b: clock[b] - clock[a] for a, b in zip(stages[:-1], stages[1:], strict=True)},
+        timing={b: clock[b] - clock[a] for a, b in pairwise(stages)},
     )
 
 
@@ -217,6 +218,7 @@ def _linear_fit(problem: Problem, name: str, seed: int, inflate: bool) -> Fit:
         n_free += 1
     few = slice(MODEL_DRAWS)
     offset_depth = problem.likelihood.with_offsets(depth[few], posterior.error_factor[few])
+    _add_offsets(problem, columns, units, depth, posterior.error_factor)
     return _assemble(
         problem, name, (), n_free, posterior.ln_evidence, 0.0, posterior.chi2, columns, units, offset_depth,
         {"steps": 0, "walkers": 0, "autocorr_steps": 0.0, "ess": float(len(posterior.radius)),
@@ -243,13 +245,23 @@ def _sampled_fit(
         units["error_factor"] = ""
     columns["reference_radius_rjup"] = radius * problem.reference_radius_m / JUPITER_RADIUS_M
     units["reference_radius_rjup"] = "Jupiter radii at 10 mbar"
+    factor = np.broadcast_to(factor, len(mean))
     few = slice(MODEL_DRAWS)
-    depth = problem.likelihood.predicted_depth(mean[few], square[few], radius[few])
-    depth = problem.likelihood.with_offsets(depth, np.broadcast_to(factor, len(mean))[few])
+    depth = problem.likelihood.predicted_depth(mean, square, radius)
+    _add_offsets(problem, columns, units, depth, factor)
+    depth = problem.likelihood.with_offsets(depth[few], factor[few])
     return _assemble(
         problem, hypothesis.name, hypothesis.species, len(parameter_set) + 1, combined.ln_evidence,
         combined.ln_evidence_err, chi2, columns, units, depth, combined.sampling,
     )  # fmt: skip
+
+
+def _add_offsets(problem: Problem, columns: dict, units: dict, depth: np.ndarray, factor: np.ndarray) -> None:
+    """Add the offset of each segment after the first, integrated analytically in the fit, to the parameters."""
+    names = problem.spectrum.segment_names[1:]
+    for name, offset in zip(names, problem.likelihood.offsets(depth, factor).T, strict=False):
+        columns[offset_name(name)] = offset / PPM
+        units[offset_name(name)] = "ppm, over the first segment"
 
 
 def _assemble(problem, name, species, n_free, ln_z, ln_z_err, chi2, columns, units, depth, sampling) -> Fit:

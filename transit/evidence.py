@@ -647,7 +647,9 @@ def climb(
     return points, ln_top
 
 
-def _gradient(ln_prob: Callable[[np.ndarray], np.ndarray], points: np.ndarray, scale: np.ndarray) -> np.ndarray:
+def _gradient(
+    ln_prob: Callable[[np.ndarray], np.ndarray], points: np.ndarray, scale: np.ndarray
+) -> np.ndarray:
     """Central-difference gradient (K, D) in the coordinates y of x = scale y."""
     count, dim = points.shape
     step = 0.05

@@ -10,7 +10,7 @@ from matplotlib.axes import Axes
 from matplotlib.figure import Figure
 from matplotlib.ticker import FixedLocator, FuncFormatter, MaxNLocator, NullFormatter, NullLocator
 
-from transit.records import CheckResult, Fit
+from transit.records import CheckResult, Fit, offset_name
 from transit.units import PPM
 from transit.verdict import STANDS_FROM, best_model, best_null
 
@@ -150,9 +150,9 @@ def _draw_depths(axes: Axes, result: CheckResult, drawn: Sequence[tuple[Fit, str
     order = {"null": 1, "best": 2, "second": 3}
     for fit, role in drawn:
         _draw_model(axes, result, fit, role, order[role])
-    _draw_points(axes, result, result.spectrum.depth_ppm, result.spectrum.depth_err_ppm)
-    if len(result.spectrum.segment_names) > 1:
-        _draw_shifted_model(axes, result, *drawn[0])
+    moved_ppm = _moved_ppm(result, drawn[0][0])
+    depth_ppm = result.spectrum.depth_ppm + moved_ppm[result.spectrum.segment]
+    _draw_points(axes, result, depth_ppm, result.spectrum.depth_err_ppm, moved_ppm)
     _set_depth_limits(axes, result, drawn)
     axes.set_ylabel("transit depth (ppm)")
     axes.tick_params(labelbottom=False)
@@ -197,7 +197,7 @@ def _model_label(result: CheckResult, fit: Fit) -> str:
     return {"flat": "flat line", "slope": "straight slope"}.get(fit.name, fit.name)
 
 
-def _draw_points(axes: Axes, result: CheckResult, values, errors) -> None:
+def _draw_points(axes: Axes, result: CheckResult, values, errors, moved_ppm=None) -> None:
     spectrum = result.spectrum
     crowded = spectrum.n_bins > _CROWDED_FROM_BINS
     for index, name in enumerate(spectrum.segment_names):
@@ -220,23 +220,21 @@ def _draw_points(axes: Axes, result: CheckResult, values, errors) -> None:
             linestyle="none",
             alpha=0.75 if crowded else 1.0,
             zorder=8,
-            label=_plain(_shortened(name, _LEGEND_LETTERS)) if len(spectrum.segment_names) > 1 else None,
+            label=_segment_label(name, moved_ppm, index) if len(spectrum.segment_names) > 1 else None,
         )
 
 
-def _draw_shifted_model(axes: Axes, result: CheckResult, fit: Fit, role: str) -> None:
-    """Best model bin by bin: where a part of the spectrum was shifted, its curve misses the points."""
-    spectrum = result.spectrum
-    axes.hlines(
-        fit.model_median / PPM,
-        spectrum.wavelength_um - spectrum.half_width_um,
-        spectrum.wavelength_um + spectrum.half_width_um,
-        color=_style(role)["color"],
-        linewidth=2.6,
-        alpha=0.8,
-        zorder=7,
-        label="binned, offsets in",
-    )
+def _segment_label(name: str, moved_ppm, index: int) -> str:
+    label = _plain(_shortened(name, _LEGEND_LETTERS))
+    if moved_ppm is not None and round(moved_ppm[index]) != 0:
+        label += f", moved {moved_ppm[index]:+.0f} ppm".replace("-", "−")
+    return label
+
+
+def _moved_ppm(result: CheckResult, fit: Fit) -> np.ndarray:
+    """What is added to each segment's depths in the drawing: less its offset in the model drawn first."""
+    offsets = [fit.parameters.get(offset_name(name)) for name in result.spectrum.segment_names]
+    return np.array([0.0 if offset is None else -offset.median for offset in offsets])
 
 
 def _set_depth_limits(axes: Axes, result: CheckResult, drawn: Sequence[tuple[Fit, str]]) -> None:
@@ -244,7 +242,8 @@ def _set_depth_limits(axes: Axes, result: CheckResult, drawn: Sequence[tuple[Fit
     spectrum = result.spectrum
     err = np.minimum(spectrum.depth_err_ppm, 3 * np.median(spectrum.depth_err_ppm))
     low, high = _wavelength_limits_um(result)
-    ends = [np.min(spectrum.depth_ppm - err), np.max(spectrum.depth_ppm + err)]
+    depth_ppm = spectrum.depth_ppm + _moved_ppm(result, drawn[0][0])[spectrum.segment]
+    ends = [np.min(depth_ppm - err), np.max(depth_ppm + err)]
     for fit, _ in drawn:
         wavelength_um, _, median, _ = _curve(result, fit)
         seen = median[(wavelength_um >= low) & (wavelength_um <= high)]
@@ -274,7 +273,7 @@ def _add_scale_height_axis(axes: Axes, result: CheckResult) -> None:
 
 def _legend_columns(labels: Sequence[str]) -> int:
     longest = max((len(label.replace("$_{", "").replace("}$", "")) for label in labels), default=0)
-    return min(len(labels), 4 if longest <= 18 else 2) or 1
+    return min(len(labels), 4 if longest <= 13 else 3 if longest <= 20 else 2) or 1
 
 
 def _add_legend(axes: Axes) -> None:

@@ -1,4 +1,4 @@
-"""Gaussian likelihood of a spectrum: covariance, offsets of segments, error inflation; reference radius integrated out."""
+"""Gaussian likelihood of a spectrum: covariance, offsets, error inflation; reference radius integrated out."""
 
 from __future__ import annotations
 
@@ -166,18 +166,31 @@ class DepthLikelihood:
             depth = depth * bin_factor
         return depth if extra_depth is None else depth + extra_depth
 
+    def offsets(self, depth: np.ndarray, error_factor: np.ndarray | float = 1.0) -> np.ndarray:
+        """Posterior mean offsets of the segments after the first, given model depths.
+
+        Parameters
+        ----------
+        depth : ndarray, shape (W, N)
+            Model depths without offsets, fraction.
+        error_factor : float or ndarray, shape (W,)
+
+        Returns
+        -------
+        ndarray, shape (W, K)
+            Fraction; K is the number of segments less one (zero columns for a spectrum of one segment).
+        """
+        if not np.any(self.membership):
+            return np.zeros((len(depth), 0))
+        factor = np.broadcast_to(np.asarray(error_factor, float), depth.shape[:1])
+        weight = 1 / (factor[:, None] ** 2 + self._eigenvalues)
+        residual = self._data - depth @ self._transform.T
+        return self.offset**2 * (residual * weight) @ (self._transform @ self.membership)
+
     def with_offsets(self, depth: np.ndarray, error_factor: np.ndarray | float = 1.0) -> np.ndarray:
         """Add the posterior mean offsets of the segments to model depths, (W, N)."""
-        if not np.any(self.membership):
-            return depth
-        factor = np.broadcast_to(np.asarray(error_factor, float), depth.shape[:1])
-        out = np.empty_like(depth)
-        marks = self._transform @ self.membership
-        for row, (model, f) in enumerate(zip(depth, factor, strict=True)):
-            weighted = marks * (1 / (f**2 + self._eigenvalues))[:, None]
-            offsets = self.offset**2 * weighted.T @ (self._data - self._transform @ model)
-            out[row] = model + self.membership @ offsets
-        return out
+        offsets = self.offsets(depth, error_factor)
+        return depth + offsets @ self.membership.T if offsets.shape[1] else depth
 
 
 def _ln_gaussian_mass(low: np.ndarray, high: np.ndarray) -> np.ndarray:

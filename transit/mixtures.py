@@ -155,9 +155,7 @@ class Mixture:
             points[rows] = self.means[k] + stretched
         return points[rng.permutation(n_draws)]
 
-    def draw_block(
-        self, z: np.ndarray, block: np.ndarray, rng: np.random.RandomState
-    ) -> np.ndarray:
+    def draw_block(self, z: np.ndarray, block: np.ndarray, rng: np.random.RandomState) -> np.ndarray:
         """Replace some coordinates of points by draws from the mixture conditional on the others.
 
         Parameters

@@ -25,6 +25,7 @@ GRID_START_CM1 = 500.0
 REGISTRY = "checksums.txt"
 SUFFIX = ".opacity"
 LN_FLOOR = -80.0  # a cross section of 1.8e-35 cm2: transparent in any atmosphere
+LN_LEAST = -130.0  # least value that a table can store; collision pairs (cm5) lie near -110
 
 
 def band_edges_cm1(first: int, count: int) -> np.ndarray:
@@ -63,6 +64,8 @@ class OpacityTable:
         One node where there is no pressure dependence.
     ln_cross_section : ndarray, shape (B, T, P, S)
         Mean of ln(cross section / cm2 per molecule) in each slice; for a collision pair ln(cm5 per molecule2).
+    ln_mean : ndarray, shape (B, T)
+        ln of the mean cross section of each band, which does not depend on pressure: for band sums.
     header : dict
         Everything else that the file states: sources, terms, trusted ranges, known bands, builder version.
     """
@@ -72,6 +75,7 @@ class OpacityTable:
     temperature_k: np.ndarray
     pressure_bar: np.ndarray
     ln_cross_section: np.ndarray
+    ln_mean: np.ndarray
     header: dict
 
     @property
@@ -112,15 +116,14 @@ def write_table(path: Path, table: OpacityTable, step: float = 0.004) -> str:
 
     Notes
     -----
-    A zip archive with fixed dates holding `header.json` and `values.npy` (16-bit integers: ln(cross section) over
-    `step`, differenced along temperature because that compresses best).
+    A zip archive with fixed dates holding `header.json`, `values.npy` (16-bit integers: ln(cross section) over
+    `step`, differenced along temperature because that compresses best) and `means.npy` (ln of band means).
     """
-    integers = np.rint(np.maximum(table.ln_cross_section, LN_FLOOR * 1.6) / step).astype(np.int16)
+    integers = np.rint(np.maximum(table.ln_cross_section, LN_LEAST) / step).astype(np.int16)
     stored = integers.copy()
     stored[:, 1:] -= integers[:, :-1]
-    payload = io.BytesIO()
-    np.save(payload, np.ascontiguousarray(stored.transpose(1, 2, 3, 0)))
-    values = payload.getvalue()
+    values = _array_bytes(stored.transpose(1, 2, 3, 0))
+    means = _array_bytes(np.rint(np.maximum(table.ln_mean, LN_LEAST) / step).astype(np.int16))
     header = {
         "format": FORMAT,
         "species": table.species,
@@ -137,7 +140,12 @@ def write_table(path: Path, table: OpacityTable, step: float = 0.004) -> str:
     }
     buffer = io.BytesIO()
     with zipfile.ZipFile(buffer, "w", zipfile.ZIP_DEFLATED, compresslevel=9) as archive:
-        for name, content in (("header.json", json.dumps(header, indent=1).encode()), ("values.npy", values)):
+        members = {
+            "header.json": json.dumps(header, indent=1).encode(),
+            "values.npy": values,
+            "means.npy": means,
+        }
+        for name, content in members.items():
             info = zipfile.ZipInfo(name, date_time=(1980, 1, 1, 0, 0, 0))
             info.compress_type = zipfile.ZIP_DEFLATED
             archive.writestr(info, content)
@@ -146,6 +154,12 @@ def write_table(path: Path, table: OpacityTable, step: float = 0.004) -> str:
     partial.write_bytes(data)
     partial.replace(path)
     return hashlib.sha256(data).hexdigest()
+
+
+def _array_bytes(array: np.ndarray) -> bytes:
+    buffer = io.BytesIO()
+    np.save(buffer, np.ascontiguousarray(array))
+    return buffer.getvalue()
 
 
 def write_registry(folder: Path) -> None:
@@ -226,6 +240,7 @@ def load_table(species: str, folder: Path | None = None) -> OpacityTable:
     with zipfile.ZipFile(io.BytesIO(data)) as archive:
         header = json.loads(archive.read("header.json"))
         stored = np.load(io.BytesIO(archive.read("values.npy")), allow_pickle=False)
+        means = np.load(io.BytesIO(archive.read("means.npy")), allow_pickle=False)
     if header.get("format") != FORMAT:
         raise OpacityTableError(f"{path} has format {header.get('format')!r}, expected {FORMAT!r}.")
     if (header["bands_per_e_fold"], header["grid_start_cm1"]) != (BANDS_PER_E_FOLD, GRID_START_CM1):
@@ -238,5 +253,6 @@ def load_table(species: str, folder: Path | None = None) -> OpacityTable:
         temperature_k=np.array(header["temperature_k"]),
         pressure_bar=np.array(header["pressure_bar"]),
         ln_cross_section=ln_cross_section,
+        ln_mean=means * header["step"],
         header=header,
     )

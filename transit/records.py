@@ -140,6 +140,11 @@ class System:
     notes: tuple[str, ...] = ()
 
 
+def offset_name(segment: str) -> str:
+    """Name of the parameter that holds the offset of a segment."""
+    return f"offset_ppm: {segment}"
+
+
 @dataclass(frozen=True, slots=True)
 class Interval:
     """Median with the 16 and 84 per cent points of a parameter, and its unit."""
@@ -155,7 +160,8 @@ class Fit:
     """One hypothesis fitted to one spectrum; everything a comparison, report or figure needs.
 
     `parameters` maps names (`temperature_k`, `log10_deck_pressure_bar`, `log10_haze_strength`, `haze_exponent`,
-    `log10_vmr_H2O`, `reference_radius_rjup`, `slope_ppm_per_efold`, `error_factor`) to intervals.
+    `log10_vmr_H2O`, `reference_radius_rjup`, `slope_ppm_per_efold`, `error_factor`, and for each segment after the
+    first `offset_name(segment)`) to intervals.
     `model_*` are depths (fraction, shape (N,)): 16, 50 and 84 per cent of the posterior, offsets included.
     `fine_*` give the same on a dense wavelength grid for drawing, offsets not included.
     `draws` has shape (S, K): equally weighted posterior draws of the K = len(draw_names) parameters.

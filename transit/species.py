@@ -13,7 +13,6 @@ from transit.opacity import OpacityTable, available, load_table
 from transit.records import DepthSpectrum, Priors, System
 
 MOST_DEFAULT_SPECIES = 6
-FEWEST_BINS_IN_BANDS = 1
 
 
 @dataclass(frozen=True)
@@ -107,10 +106,10 @@ def select_species(
         table = load_table(name, tables)
         inside, usable = bins_in_trusted_bands(spectrum, table, temperature)
         count = int(inside.sum())
-        if count >= FEWEST_BINS_IN_BANDS:
+        if count > 0:
             found[name] = (count, table, usable)
         elif requested is not None:
-            untested[name] = _why_untested(name, table, count, temperature)
+            untested[name] = _why_untested(name, table, temperature)
     ranked = sorted(found, key=lambda name: -found[name][0])
     chosen = ranked if requested is not None else ranked[:MOST_DEFAULT_SPECIES]
     species = tuple(name for name in names if name in chosen)
@@ -139,13 +138,13 @@ def select_species(
     return Selection(species, reasons, untested, (low, high), coverage, notes)
 
 
-def _why_untested(name: str, table: OpacityTable, count: int, temperature_k: float) -> str:
+def _why_untested(name: str, table: OpacityTable, temperature_k: float) -> str:
     ranges = "; ".join(
         f"{r['low_um']:g}-{r['high_um']:g} um at {r['t_min_k']:g}-{r['t_max_k']:g} K" for r in table.trusted
     )
     return (
-        f"{name}: {count} bins lie inside bands where its table is trusted at {temperature_k:.0f} K "
-        f"(trusted: {ranges}); at least one is needed."
+        f"{name}: no bin lies inside one of its bands where its table is trusted at {temperature_k:.0f} K "
+        f"(trusted: {ranges})."
     )
 
 

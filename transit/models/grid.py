@@ -120,7 +120,7 @@ def cell_slices(ln_values: np.ndarray, weights: np.ndarray) -> np.ndarray:
     ndarray, shape (K, SLICES)
         Increasing; the mean over slices is the weighted mean of ln k.
     """
-    n_bands, n_cases, n_slices = ln_values.shape
+    _, n_cases, n_slices = ln_values.shape
     flat = ln_values.transpose(1, 0, 2).reshape(n_cases, -1)
     share = np.repeat(weights / n_slices, n_slices)
     order = np.argsort(flat, axis=1)

@@ -29,6 +29,7 @@ TEMPERATURE_K = np.array(
 )
 PRESSURE_BAR = 10.0 ** np.arange(-6, 2)
 COLLISION_TEMPERATURE_K = np.array([150, 200, 250, 300, 350, 400, 600, 800, 1000, 1500, 2000, 2500], float)
+MEAN_PRESSURE_BAR = PRESSURE_BAR[4]  # band means are kept at 10 mbar: they hardly depend on pressure
 SEGMENT_BANDS = 12  # bands summed in one go: 3 per cent in wavenumber, so one Doppler width serves
 
 HITRAN_TERMS = "HITRAN data are free to use with citation; computed tables may be distributed with it."
@@ -47,7 +48,7 @@ def slices_from_lines(
     temperature_k: float,
     pressure_bar: np.ndarray,
     band_means: BandMeans | None = None,
-) -> np.ndarray:
+) -> tuple[np.ndarray, np.ndarray]:
     """Slice means of ln k from summed Voigt lines, completed by band means where given.
 
     Parameters
@@ -62,9 +63,11 @@ def slices_from_lines(
 
     Returns
     -------
-    ndarray, shape (n_bands, P, N_SLICES)
+    (ndarray, ndarray), shape (n_bands, P, N_SLICES) and (n_bands,)
+        And ln of the band means.
     """
     out = np.full((n_bands, len(pressure_bar), N_SLICES), LN_FLOOR)
+    ln_mean = np.full(n_bands, LN_FLOOR)
     missing = None
     if band_means is not None and temperature_k >= band_means.temperature_k[0]:
         missing = missing_mean_cm2(lines, band_means, temperature_k)
@@ -80,7 +83,11 @@ def slices_from_lines(
             ln_k = np.log(np.maximum(k, np.exp(LN_FLOOR)))
             for band in range(count):
                 out[start + band, p] = slice_means(ln_k[cuts[band] : cuts[band + 1]])
-    return out
+            if pressure == MEAN_PRESSURE_BAR:
+                for band in range(count):
+                    mean = k[cuts[band] : cuts[band + 1]].mean()
+                    ln_mean[start + band] = np.log(max(mean, np.exp(LN_FLOOR)))
+    return out, ln_mean
 
 
 @cache
@@ -98,7 +105,7 @@ def slices_from_means(
     molar_mass: float,
     gamma_296k: float,
     gamma_exponent: float,
-) -> np.ndarray:
+) -> tuple[np.ndarray, np.ndarray]:
     """Slice means of ln k of the Malkmus form with the calibrated effective width.
 
     Parameters
@@ -113,7 +120,8 @@ def slices_from_means(
 
     Returns
     -------
-    ndarray, shape (B, P, N_SLICES)
+    (ndarray, ndarray), shape (B, P, N_SLICES) and (B,)
+        And ln of the band means.
     """
     out = np.empty((len(centre_cm1), len(pressure_bar), N_SLICES))
     doppler = doppler_hwhm_cm1(centre_cm1, temperature_k, molar_mass)
@@ -121,7 +129,7 @@ def slices_from_means(
         lorentz = gamma_296k * (296.0 / temperature_k) ** gamma_exponent * pressure / ATM_BAR
         width = effective_width_cm1(species, lorentz, doppler, lines_per_cm1)
         out[:, p] = _malkmus()(np.maximum(ln_mean, LN_FLOOR), 2 * width * lines_per_cm1)
-    return np.maximum(out, LN_FLOOR)
+    return np.maximum(out, LN_FLOOR), np.maximum(ln_mean, LN_FLOOR)
 
 
 # --- H2O ---------------------------------------------------------------------------------------------------
@@ -134,16 +142,13 @@ def water_lines(source: Path) -> LineList:
     table = pd.read_csv(source / "hot_linelists/H2O_linemake.csv.gz")
     nu = table["nu_vac_cm-1"].to_numpy()
     table = table[(nu > 5405) & ~((nu >= 6000) & (nu < 6400))]
-    strong = hitran.intensity > 1e-23
-    weight = hitran.intensity[strong]
     rest = lines_from_gf(
         table["nu_vac_cm-1"],
         table["E_lower_cm-1"],
         table["log10_gf_corrected"],
         np.full(len(table), 0.997317),
         np.ones(len(table), int),
-        float(np.average(hitran.gamma[strong], weights=weight)),
-        float(np.average(hitran.gamma_exponent[strong], weights=weight)),
+        *mean_width(hitran, 1e-23),
         hitran.molar_mass,
         hitran.partition,
     )
@@ -182,6 +187,16 @@ def _merge(a: LineList, b: LineList) -> LineList:
     )
 
 
+def mean_width(lines: LineList, least_intensity: float) -> tuple[float, float]:
+    """Strength-weighted mean air width (cm-1/atm) and its temperature exponent, for lists that have none."""
+    strong = lines.intensity > least_intensity
+    weights = lines.intensity[strong]
+    return (
+        float(np.average(lines.gamma[strong], weights=weights)),
+        float(np.average(lines.gamma_exponent[strong], weights=weights)),
+    )
+
+
 def _span(low_cm1: float, high_cm1: float) -> tuple[int, int]:
     first = int(band_index(low_cm1 * (1 + 1e-9)))
     return first, int(band_index(high_cm1)) - first
@@ -195,8 +210,8 @@ def _water_inputs(source: Path):
 WATER_SPAN = _span(500.0, 12950.0)
 
 
-def water_at(source: Path, temperature_k: float) -> np.ndarray:
-    """Slices of H2O at one temperature, shape (B, P, S)."""
+def water_at(source: Path, temperature_k: float) -> tuple[np.ndarray, np.ndarray]:
+    """Slices of H2O at one temperature, (B, P, S), and ln of the band means, (B,)."""
     lines, means = _water_inputs(source)
     return slices_from_lines(lines, *WATER_SPAN, temperature_k, PRESSURE_BAR, means)
 
@@ -208,7 +223,7 @@ WATER_HEADER = {
         {"low_um": 0.775, "high_um": 0.90, "t_min_k": 150, "t_max_k": 1000,
          "error": "lines alone, 20 per cent; nothing completes them above 1000 K"},
     ],
-    "bands_um": [[0.81, 0.84], [0.91, 0.98], [1.10, 1.18], [1.32, 1.50], [1.77, 1.98], [2.50, 2.95], [5.5, 7.5]],
+    "bands_um": [[0.81, 0.84], [0.91, 0.98], [1.10, 1.18], [1.32, 1.50], [1.77, 1.98], [2.50, 3.10], [4.9, 8.0]],
     "method": f"Voigt lines cut at {LINE_CUTOFF_CM1:g} cm-1, air widths (H2/He widths differ by tens of per cent); "
     "hot gas completed to the band means by displaced copies of the line structure",
     "sources": [CITE_HITRAN, CITE_TIPS, CITE_BAND_MEANS,
@@ -220,8 +235,6 @@ WATER_HEADER = {
 
 CO_ABUNDANCE = {1216: 0.986544, 1316: 0.011084, 1218: 0.001978, 1217: 0.000368}
 CO_PARTITION_INDEX = {1216: 1, 1316: 2, 1218: 3, 1217: 4}
-# Strength-weighted means of the air widths of the HITRAN2012 CO lines at 2000-2250 cm-1.
-CO_GAMMA, CO_GAMMA_EXPONENT = 0.0585, 0.70
 
 
 def carbon_monoxide_lines(source: Path) -> LineList:
@@ -236,8 +249,7 @@ def carbon_monoxide_lines(source: Path) -> LineList:
         table["log10_gf_hitran_scale"],
         kind.map(CO_ABUNDANCE),
         kind.map(CO_PARTITION_INDEX),
-        CO_GAMMA,
-        CO_GAMMA_EXPONENT,
+        *mean_width(read_hitran(source / "hitran/05_CO.par.gz", sums), 1e-22),
         27.994915,
         {index: sums[5, index] for index in CO_PARTITION_INDEX.values()},
     )
@@ -251,8 +263,8 @@ def _co_inputs(source: Path):
     return carbon_monoxide_lines(source)
 
 
-def carbon_monoxide_at(source: Path, temperature_k: float) -> np.ndarray:
-    """Slices of CO at one temperature, shape (B, P, S)."""
+def carbon_monoxide_at(source: Path, temperature_k: float) -> tuple[np.ndarray, np.ndarray]:
+    """Slices of CO at one temperature, (B, P, S), and ln of the band means, (B,)."""
     return slices_from_lines(_co_inputs(source), *CO_SPAN, temperature_k, PRESSURE_BAR)
 
 
@@ -281,21 +293,23 @@ def _co2_inputs(source: Path):
     )
 
 
-def _overlay_lines(out, span, stretches, lines, means, temperature_k):
+def _overlay_lines(out, band_mean, span, stretches, lines, means, temperature_k):
     """Replace the Malkmus slices by summed lines in the stretches that have a complete list."""
     for low, high in stretches:
         first = int(band_index(low)) + 1
         count = int(band_index(high)) - first
         at = first - span[0]
-        out[at : at + count] = slices_from_lines(lines, first, count, temperature_k, PRESSURE_BAR, means)
+        out[at : at + count], band_mean[at : at + count] = slices_from_lines(
+            lines, first, count, temperature_k, PRESSURE_BAR, means
+        )
 
 
-def carbon_dioxide_at(source: Path, temperature_k: float) -> np.ndarray:
-    """Slices of CO2 at one temperature, shape (B, P, S)."""
+def carbon_dioxide_at(source: Path, temperature_k: float) -> tuple[np.ndarray, np.ndarray]:
+    """Slices of CO2 at one temperature, (B, P, S), and ln of the band means, (B,)."""
     lines, means = _co2_inputs(source)
     edges = band_edges_cm1(*CO2_SPAN)
     centre = np.sqrt(edges[1:] * edges[:-1])
-    out = slices_from_means(
+    out, band_mean = slices_from_means(
         "CO2",
         means.ln_mean_at(centre, temperature_k),
         means.lines_per_cm1_at(centre, temperature_k),
@@ -306,8 +320,8 @@ def carbon_dioxide_at(source: Path, temperature_k: float) -> np.ndarray:
         CO2_GAMMA,
         CO2_GAMMA_EXPONENT,
     )
-    _overlay_lines(out, CO2_SPAN, CO2_LINE_STRETCHES_CM1, lines, means, temperature_k)
-    return out
+    _overlay_lines(out, band_mean, CO2_SPAN, CO2_LINE_STRETCHES_CM1, lines, means, temperature_k)
+    return out, band_mean
 
 
 CO2_HEADER = {
@@ -356,8 +370,8 @@ def _box_mean(nu, values, edges):
     return np.where(count > 0, total / np.maximum(count, 1), np.interp(centre, nu[known], values[known]))
 
 
-def methane_at(source: Path, temperature_k: float) -> np.ndarray:
-    """Slices of CH4 at one temperature, shape (B, P, S)."""
+def methane_at(source: Path, temperature_k: float) -> tuple[np.ndarray, np.ndarray]:
+    """Slices of CH4 at one temperature, (B, P, S), and ln of the band means, (B,)."""
     lines, means, near_ir, visible = _ch4_inputs(source)
     edges = band_edges_cm1(*CH4_SPAN)
     centre = np.sqrt(edges[1:] * edges[:-1])
@@ -374,12 +388,12 @@ def methane_at(source: Path, temperature_k: float) -> np.ndarray:
     density = np.where(use, np.median(spacing[(centre > 8000) & (centre < CH4_LUT_END_CM1)]), density)
     nothing = ~np.isfinite(ln_mean)
     density = np.where(nothing | ~np.isfinite(density) | (density <= 0), 1.0, density)
-    out = slices_from_means(
+    out, band_mean = slices_from_means(
         "CH4", ln_mean, density, centre, temperature_k, PRESSURE_BAR, 16.0313, CH4_GAMMA, CH4_GAMMA_EXPONENT
     )
     out[nothing] = LN_FLOOR
-    _overlay_lines(out, CH4_SPAN, CH4_LINE_STRETCHES_CM1, lines, means, temperature_k)
-    return out
+    _overlay_lines(out, band_mean, CH4_SPAN, CH4_LINE_STRETCHES_CM1, lines, means, temperature_k)
+    return out, band_mean
 
 
 CH4_HEADER = {
@@ -410,18 +424,21 @@ ALKALI_SPAN = {"Na": _span(15450.0, 18480.0), "K": _span(11480.0, 14550.0)}
 
 def alkali_at(
     atom: str, source: Path, temperature_k: float, cutoff_cm1: float = alkali.WING_CUTOFF_CM1
-) -> np.ndarray:
-    """Slices of an alkali doublet at one temperature, shape (B, P, S)."""
+) -> tuple[np.ndarray, np.ndarray]:
+    """Slices of an alkali doublet at one temperature, (B, P, S), and ln of the band means, (B,)."""
     doublet = alkali.read_doublet(source / "atomic_Na_K_resonance.csv", atom)
     first, count = ALKALI_SPAN[atom]
     out = np.empty((count, len(PRESSURE_BAR), N_SLICES))
+    ln_mean = np.empty(count)
     for band in range(count):
         low, high = band_edges_cm1(first + band, 1)
         grid = low + (high - low) * (np.arange(4000) + 0.5) / 4000
         for p, pressure in enumerate(PRESSURE_BAR):
             k = alkali.doublet_cross_section_cm2(grid, doublet, atom, temperature_k, pressure, cutoff_cm1)
             out[band, p] = slice_means(np.log(np.maximum(k, np.exp(LN_FLOOR))))
-    return out
+            if pressure == MEAN_PRESSURE_BAR:
+                ln_mean[band] = np.log(max(k.mean(), np.exp(LN_FLOOR)))
+    return out, ln_mean
 
 
 def _alkali_header(atom: str, low_um: float, high_um: float, band: list[float]) -> dict:
@@ -445,13 +462,14 @@ COLLISION_FILES = {
 }  # fmt: skip
 
 
-def collisions_at(pair: str, source: Path, temperature_k: float) -> np.ndarray:
-    """ln coefficient (cm5 per molecule2) of a collision pair at one temperature, shape (B, 1, 1)."""
+def collisions_at(pair: str, source: Path, temperature_k: float) -> tuple[np.ndarray, np.ndarray]:
+    """ln coefficient (cm5 per molecule2) of a collision pair at one temperature, (B, 1, 1) and (B,)."""
     edges = band_edges_cm1(*COLLISION_SPAN)
     centre = np.sqrt(edges[1:] * edges[:-1])
     parts = [read_collision_table(source / f"cia/{name}.csv.gz") for name in COLLISION_FILES[pair]]
     value = coefficient_cm5(parts, centre, temperature_k)
-    return np.log(np.maximum(value, 1e-55))[:, None, None]
+    ln_value = np.log(np.maximum(value, 1e-55))
+    return ln_value[:, None, None], ln_value
 
 
 def _collision_header(pair: str) -> dict:
@@ -486,7 +504,7 @@ RECIPES = {
 }  # fmt: skip
 
 
-def assemble(name: str, by_temperature: list[np.ndarray]) -> OpacityTable:
+def assemble(name: str, by_temperature: list[tuple[np.ndarray, np.ndarray]]) -> OpacityTable:
     """Put the slices of all temperatures of a recipe into a table."""
     _, span, temperature_k, pressure_bar, header = RECIPES[name]
     return OpacityTable(
@@ -494,6 +512,7 @@ def assemble(name: str, by_temperature: list[np.ndarray]) -> OpacityTable:
         first_band=span[0],
         temperature_k=temperature_k,
         pressure_bar=pressure_bar,
-        ln_cross_section=np.stack(by_temperature, axis=1),
+        ln_cross_section=np.stack([slices for slices, _ in by_temperature], axis=1),
+        ln_mean=np.stack([ln_mean for _, ln_mean in by_temperature], axis=1),
         header={**header, "builder_version": BUILDER_VERSION},
     )
