@@ -44,6 +44,8 @@ _BATCH_ROWS = 512
 _POSTERIOR_DRAWS = 2000
 # Number of equal-probability strata of the stratum coordinate.
 _STRATA = 5
+# The umbrella lifts strata down to e^-8 of the heaviest one: rough masses found on the way may be e^4 off.
+_LN_UMBRELLA = 8.0
 # Temperatures between prior and posterior; a peak of ln L = 10 000 takes about 20.
 _MAX_STAGES = 40
 _BURN_SEGMENTS = 5
@@ -297,7 +299,8 @@ def estimate_evidence(
     target = _Target(ln_likelihood, n_dim)
 
     pool = _Pool(target)
-    explored, ln_explored = _explore(pool, budget, seeds[1], rng, chain_hook)
+    strata = _Strata(stratum_dim)
+    explored, ln_explored = _explore(pool, strata, budget, seeds[1], rng, chain_hook)
     peaks = _find_peaks(target, explored, ln_explored, stratum_dim, starts_z, budget.climb_steps)
     wide = _adapt(pool, explored, ln_explored, peaks, budget, rng)
     chain = _produce(pool, wide, budget, seeds[2], rng, chain_hook)
@@ -382,36 +385,96 @@ def _relative(ln_weights: np.ndarray) -> np.ndarray:
 
 
 def _resample_walkers(
-    points: np.ndarray, ln_weights: np.ndarray, n_walkers: int, rng: np.random.Generator
+    points: np.ndarray, weights: np.ndarray, n_walkers: int, rng: np.random.Generator
 ) -> np.ndarray:
     """Positions (W, D) resampled from weighted points; a hair's breadth parts repeated ones.
 
     The moves step along differences of walkers and fail on two at the same place.
     """
-    starts = points[systematic_resample(_relative(ln_weights), n_walkers, rng)]
+    starts = points[systematic_resample(weights, n_walkers, rng)]
     return starts + 1e-6 * rng.standard_normal(starts.shape)
+
+
+class _Strata:
+    """Umbrella over strata of one coordinate: a bias that keeps walkers in each of them.
+
+    A region such as a clear deck can hold a tenth of the mass in a thin corner, which a hundred walkers lose by
+    chance and never find again. The bias lifts each stratum to about equal occupation, up to a limit, while the
+    ensemble explores (umbrella sampling: Torrie & Valleau 1977, J. Comput. Phys. 23, 187). The evidence never
+    uses it.
+    """
+
+    def __init__(self, dim: int | None):
+        self._dim = dim
+        count = 1 if dim is None else _STRATA
+        self._edges = ndtri(np.arange(1, count) / count)
+        self.ln_mass = np.zeros(count)
+
+    def index(self, z: np.ndarray) -> np.ndarray:
+        """Stratum (N,) of points (N, D)."""
+        if self._dim is None:
+            return np.zeros(len(z), dtype=int)
+        return np.searchsorted(self._edges, z[:, self._dim])
+
+    def ln_bias(self, z: np.ndarray) -> np.ndarray:
+        """Log bias (N,) of points (N, D)."""
+        return -np.maximum(self.ln_mass, self.ln_mass.max() - _LN_UMBRELLA)[self.index(z)]
+
+    def shares(self, z: np.ndarray, ln_weights: np.ndarray) -> np.ndarray:
+        """Weights (N,) of points, scaled so that each stratum with points has the same total, up to the limit."""
+        index = self.index(z)
+        shares = np.zeros(len(z))
+        for s in np.unique(index):
+            inside = index == s
+            lifted = self.ln_mass[s] - max(self.ln_mass[s], self.ln_mass.max() - _LN_UMBRELLA)
+            top = ln_weights[inside].max()
+            if np.isfinite(top):
+                weights = np.exp(ln_weights[inside] - top)
+                shares[inside] = weights / weights.sum() * np.exp(lifted)
+        return shares
+
+    def reweigh(self, z: np.ndarray, ln_weights: np.ndarray) -> None:
+        """Update the masses by the mean weight of the points in each stratum."""
+        index = self.index(z)
+        change = np.full(len(self.ln_mass), -np.inf)
+        for s in np.unique(index):
+            inside = index == s
+            change[s] = logsumexp(ln_weights[inside]) - np.log(inside.sum())
+        # A stratum without points, or with no likelihood at all, falls as fast as the slowest of the others.
+        change[np.isneginf(change)] = change[np.isfinite(change)].min()
+        self.ln_mass += change - change.max()
+        self.ln_mass -= self.ln_mass.max()
+
+    def rebalance(self, z: np.ndarray) -> None:
+        """Update the masses by the occupation that the bias led to."""
+        count = len(self.ln_mass)
+        occupation = np.bincount(self.index(z), minlength=count) / len(z)
+        # The offset keeps an empty stratum from a runaway bias.
+        self.ln_mass += np.log((occupation + 0.02) / (1 / count + 0.02))
+        self.ln_mass -= self.ln_mass.max()
 
 
 def _explore(
     pool: _Pool,
+    strata: _Strata,
     budget: Budget,
     sequence: np.random.SeedSequence,
     rng: np.random.Generator,
     hook: ChainHook | None,
 ) -> tuple[np.ndarray, np.ndarray]:
-    """Cool an ensemble from the prior to the posterior, then burn it in.
+    """Cool an ensemble from the prior to the posterior, then burn it in, all under the umbrella of the strata.
 
     The power of the likelihood rises by steps that keep half of the walkers effective; each step resamples them
-    and runs a short chain, whose independence moves come from a mixture fitted to the step before (sequential
-    Monte Carlo: Del Moral, Doucet & Jasra 2006, J. R. Stat. Soc. B 68, 411). Walkers sent straight to power 1
-    would keep each region in proportion to its basin, not to its mass.
+    and runs a short chain, whose moves come from a mixture fitted to the step before (sequential Monte Carlo: Del
+    Moral, Doucet & Jasra 2006, J. R. Stat. Soc. B 68, 411). Walkers sent straight to power 1 would keep each
+    region in proportion to its basin, not to its mass.
 
     Returns
     -------
     points : np.ndarray
-        Shape (N, D), second half of the last chain, at power 1.
+        Shape (N, D), later half of the last chain, at power 1.
     ln_post : np.ndarray
-        Shape (N,).
+        Shape (N,), without the bias.
     """
     target = pool.target
     pool.add(standard_normal_mixture(target.n_dim), budget.pool, rng)
@@ -422,24 +485,28 @@ def _explore(
     points, ln_like, power, goal = pool.draws, pool.ln_like, 0.0, min(budget.walkers, budget.pool // 4)
     guide = None
     for stage in range(_MAX_STAGES):
-        rise = (1 - power) * tempering_power((1 - power) * ln_like, goal)
+        rise = tempering_step(partial(strata.shares, points), ln_like, 1 - power, goal)
         # The last stage goes all the way: importance weights correct what it misses.
-        power = 1.0 if power + rise > 0.999 or stage == _MAX_STAGES - 1 else power + rise
-        walkers = _resample_walkers(points, rise * ln_like, budget.walkers, rng)
+        rise = 1 - power if power + rise > 0.999 or stage == _MAX_STAGES - 1 else rise
+        power = 1.0 if rise == 1 - power else power + rise
+        strata.reweigh(points, rise * ln_like)
+        shares = strata.shares(points, rise * ln_like)
+        walkers = _resample_walkers(points, shares, budget.walkers, rng)
         if guide is None:
-            guide = _fit_guide(points, rise * ln_like, rng)
+            guide = _fit_guide(points, shares, rng)
         if power == 1.0:
             break
-        chain = _segment(target, power, walkers, guide, budget.stage_steps, sequence, (0, stage), rng)
+        chain = _segment(target, strata, power, walkers, guide, budget.stage_steps, sequence, (0, stage), rng)
         later = chain.positions[budget.stage_steps // 2 :].reshape(-1, target.n_dim)
-        guide = _fit_guide(later, np.zeros(len(later)), rng)
+        guide = _fit_guide(later, np.ones(len(later)), rng)
         points, goal = chain.positions[-1], budget.walkers // 2
-        ln_like = (chain.ln_prob[-1] - _ln_standard_normal(points)) / power
-    return _burn_in(target, walkers, guide, budget, sequence, rng, hook)
+        ln_like = (chain.ln_prob[-1] - strata.ln_bias(points) - _ln_standard_normal(points)) / power
+    return _burn_in(target, strata, walkers, guide, budget, sequence, rng, hook)
 
 
 def _burn_in(
     target: _Target,
+    strata: _Strata,
     walkers: np.ndarray,
     guide: Mixture,
     budget: Budget,
@@ -451,13 +518,15 @@ def _burn_in(
     positions, ln_prob = [], []
     for part in range(_BURN_SEGMENTS):
         n_steps = max(2, budget.burn_steps // _BURN_SEGMENTS)
-        chain = _segment(target, 1.0, walkers, guide, n_steps, sequence, (1, part), rng)
+        chain = _segment(target, strata, 1.0, walkers, guide, n_steps, sequence, (1, part), rng)
+        flat = chain.positions.reshape(-1, target.n_dim)
         positions.append(chain.positions)
-        ln_prob.append(chain.ln_prob)
+        ln_prob.append(chain.ln_prob - strata.ln_bias(flat).reshape(chain.ln_prob.shape))
         walkers = chain.positions[-1]
         if part < _BURN_SEGMENTS - 1:
+            strata.rebalance(flat)
             recent = np.concatenate(positions[part // 2 :]).reshape(-1, target.n_dim)
-            guide = _fit_guide(recent, np.zeros(len(recent)), rng)
+            guide = _fit_guide(recent, np.ones(len(recent)), rng)
     chain = sampling.EnsembleChain(np.concatenate(positions), np.concatenate(ln_prob), chain.acceptance)
     seen, ln_seen = _hooked(hook, "burn-in", chain, target)
     later = slice(len(seen) // 2, None)
@@ -466,6 +535,7 @@ def _burn_in(
 
 def _segment(
     target: _Target,
+    strata: _Strata,
     power: float,
     walkers: np.ndarray,
     guide: Mixture,
@@ -477,49 +547,55 @@ def _segment(
     """One short chain at one power, with moves from a mixture."""
     moves = sampling.guided_moves(guide, len(walkers), n_steps, rng)
     child = sampling.child_sequence(sequence, *path)
-    return sampling.run_ensemble(partial(_tempered, target, power), walkers, n_steps, child, moves)
+    return sampling.run_ensemble(partial(_tempered, target, strata, power), walkers, n_steps, child, moves)
 
 
-def _tempered(target: _Target, power: float, z: np.ndarray) -> np.ndarray:
-    """Log of prior times L^power (N,) at points (N, D)."""
-    if power == 1.0:
-        return target.ln_posterior(z)
+def _tempered(target: _Target, strata: _Strata, power: float, z: np.ndarray) -> np.ndarray:
+    """Log of prior times L^power times the umbrella's bias (N,) at points (N, D)."""
     ln_prior = _ln_standard_normal(z)
-    return ln_prior + power * (target.ln_posterior(z) - ln_prior)
+    return ln_prior + power * (target.ln_posterior(z) - ln_prior) + strata.ln_bias(z)
 
 
-def _fit_guide(draws: np.ndarray, ln_weights: np.ndarray, rng: np.random.Generator) -> Mixture:
-    """Mixture that guides the moves of a chain, fitted to weighted draws (N, D)."""
-    weights = _relative(ln_weights)
-    used = np.flatnonzero(weights > 1e-4)
+def _fit_guide(draws: np.ndarray, shares: np.ndarray, rng: np.random.Generator) -> Mixture:
+    """Mixture that guides the moves of a chain, fitted to draws (N, D) with weights (N,)."""
+    used = np.flatnonzero(shares > 1e-4 * shares.max())
     used = rng.permutation(used)[:_FIT_DRAWS]
-    core = choose_mixture(draws[used], weights[used], rng, sizes=(1, 2, 3, 4, 6, 8), dof=5.0, thin=CHAIN_THIN)
+    core = choose_mixture(draws[used], shares[used], rng, sizes=(1, 2, 3, 4, 6, 8), dof=5.0, thin=CHAIN_THIN)
     return _with_safety(core.widened(1.2), None, prior_share=0.1, peak_share=0.0)
 
 
-def tempering_power(ln_like: np.ndarray, size: float) -> float:
-    """Largest power in [0, 1] at which weights L^power have a given effective size.
+def tempering_step(
+    shares: Callable[[np.ndarray], np.ndarray], ln_like: np.ndarray, limit: float, size: float
+) -> float:
+    """Largest rise of the power of the likelihood that keeps a given effective number of points.
 
     Parameters
     ----------
+    shares : callable
+        Maps log weights (N,) to weights (N,).
     ln_like : np.ndarray
         Shape (N,), log likelihoods, some finite.
+    limit : float
+        Largest rise allowed.
     size : float
-        Wanted effective number of draws.
+        Wanted effective number of points.
 
     Returns
     -------
     float
+        In (0, limit].
     """
-    relative = ln_like - ln_like.max()
-    if effective_size(np.exp(relative)) >= size:
-        return 1.0
-    low, high = 0.0, 1.0
-    # Sixty halvings resolve 1e-18, enough for |ln L| of 1e6 and more.
-    for _ in range(60):
+
+    def reached(rise: float) -> bool:
+        return effective_size(shares(rise * ln_like)) >= size
+
+    if reached(limit):
+        return limit
+    low, high = 0.0, limit
+    # Forty halvings resolve 1e-12, enough for |ln L| of 1e6 and more.
+    for _ in range(40):
         middle = 0.5 * (low + high)
-        reached = effective_size(np.exp(middle * relative)) >= size
-        low, high = (middle, high) if reached else (low, middle)
+        low, high = (middle, high) if reached(middle) else (low, middle)
     return high
 
 
@@ -789,7 +865,7 @@ def _produce(
     hook: ChainHook | None,
 ) -> sampling.EnsembleChain:
     """Production chain, started from the weighted draws."""
-    start = _resample_walkers(pool.draws, truncate(pool.ln_weights()), budget.walkers, rng)
+    start = _resample_walkers(pool.draws, _relative(truncate(pool.ln_weights())), budget.walkers, rng)
     chain = sampling.run_ensemble(
         pool.target.ln_posterior,
         start,

@@ -35,20 +35,48 @@ class BandMeans:
     lines_per_cm1: np.ndarray
 
     def ln_mean_at(self, wavenumber_cm1: np.ndarray, temperature_k: float) -> np.ndarray:
-        """ln of the mean cross section, interpolated between band centres; -inf outside them."""
-        return self._at(np.log(self.cross_section_cm2), wavenumber_cm1, temperature_k)
+        """ln of the mean cross section as a continuous curve that keeps the mean of every band; -inf outside."""
+        nodes = interpolate_temperature(np.log(self.cross_section_cm2), self.temperature_k, temperature_k)
+        return self._at(keep_band_means(nodes, self.centre_cm1), wavenumber_cm1)
 
     def lines_per_cm1_at(self, wavenumber_cm1: np.ndarray, temperature_k: float) -> np.ndarray:
         """Inverse mean line spacing, interpolated between band centres."""
-        return np.exp(self._at(np.log(np.maximum(self.lines_per_cm1, 1e-3)), wavenumber_cm1, temperature_k))
+        ln_density = np.log(np.maximum(self.lines_per_cm1, 1e-3))
+        nodes = interpolate_temperature(ln_density, self.temperature_k, temperature_k)
+        return np.exp(self._at(nodes, wavenumber_cm1))
 
-    def _at(self, ln_values, wavenumber_cm1, temperature_k):
-        by_band = interpolate_temperature(ln_values, self.temperature_k, temperature_k)
+    def _at(self, by_band, wavenumber_cm1):
         half = BAND_WIDTH_CM1 / 2
         inside = (wavenumber_cm1 >= self.centre_cm1[0] - half) & (
             wavenumber_cm1 <= self.centre_cm1[-1] + half
         )
         return np.where(inside, np.interp(wavenumber_cm1, self.centre_cm1, by_band), -np.inf)
+
+
+def keep_band_means(ln_mean: np.ndarray, centre_cm1: np.ndarray) -> np.ndarray:
+    """Node values at the band centres such that straight lines of ln k between them keep every band's mean.
+
+    Straight lines through the means themselves would cut off narrow peaks: 16 per cent of the 4.3 um band of CO2
+    at 300 K.
+
+    Parameters
+    ----------
+    ln_mean, centre_cm1 : ndarray, shape (B,)
+        ln of the mean of each band, and its centre.
+
+    Returns
+    -------
+    ndarray, shape (B,)
+    """
+    inside = (np.arange(25) + 0.5) / 25 - 0.5
+    points = centre_cm1[:, None] + BAND_WIDTH_CM1 * inside
+    nodes = ln_mean.copy()
+    for _ in range(12):
+        means = np.exp(np.interp(points, centre_cm1, nodes)).mean(axis=1)
+        # Damped steps and a limit: next to a band without lines the correction would otherwise run away.
+        nodes += 0.7 * np.clip(ln_mean - np.log(means), -1.0, 1.0)
+        nodes = np.clip(nodes, ln_mean - 2.0, ln_mean + 2.0)
+    return nodes
 
 
 def interpolate_temperature(ln_values: np.ndarray, grid_k: np.ndarray, temperature_k: float) -> np.ndarray:

@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 from scipy.ndimage import uniform_filter1d
 
-from transit.opacity_builder.bandmeans import BAND_WIDTH_CM1, BandMeans
+from transit.opacity_builder.bandmeans import BAND_WIDTH_CM1, BandMeans, interpolate_temperature
 from transit.opacity_builder.linelists import LineList
 
 # Hot bands are copies of the cold ones, displaced by anharmonicity: a handful of displaced copies fills the gaps
@@ -33,7 +33,10 @@ def missing_mean_cm2(lines: LineList, band_means: BandMeans, temperature_k: floa
     strength = lines.intensity_at(temperature_k)
     summed, _ = np.histogram(lines.wavenumber_cm1, bins=edges, weights=strength)
     have = summed / BAND_WIDTH_CM1
-    want = np.exp(band_means.ln_mean_at(band_means.centre_cm1, temperature_k))
+    ln_mean = interpolate_temperature(
+        np.log(band_means.cross_section_cm2), band_means.temperature_k, temperature_k
+    )
+    want = np.exp(ln_mean)
     return np.maximum(want - have, 0.0)
 
 
