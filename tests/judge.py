@@ -22,12 +22,12 @@ CUT_CM1 = 25.0
 NEAR_CM1 = 1.0  # beyond it a line of infrared Doppler width is Lorentzian to 1e-3 and better
 TOP_BAR = 1e-9
 BOTTOM_BAR = 10.0
-LEVELS_PER_E_FOLD = 10
+LEVELS_PER_E_FOLD = 6
 REFERENCE_BAR = 0.01
 # Atomic weights: CIAAW abridged standard atomic weights, 2021.
 MASS = {"H2": 2.016, "He": 4.0026, "H2O": 18.015, "CO": 28.010, "CO2": 44.009, "CH4": 16.043}
 HITRAN_NUMBER = {"H2O": 1, "CO2": 2, "CO": 5, "CH4": 6}
-LINE_PRESSURES_BAR = 10.0 ** np.arange(-8.0, 1.125, 0.25)
+LINE_PRESSURES_BAR = 10.0 ** (np.arange(-24, 4) / 3.0)
 
 
 @dataclass(frozen=True)
@@ -115,6 +115,17 @@ def helium_rayleigh_cm2(points_cm1: np.ndarray) -> np.ndarray:
     return 128 * np.pi**5 / 3 * 2.05e-25**2 * points_cm1**4
 
 
+def mean_weight(vmr: dict[str, float]) -> float:
+    """Mean molecular weight of hydrogen and helium (0.85 to 0.15 by number) with absorbers."""
+    share = {"H2": 0.85 * (1 - sum(vmr.values())), "He": 0.15 * (1 - sum(vmr.values()))}
+    return sum(MASS[name] * x for name, x in (share | vmr).items())
+
+
+def scale_height_m(vmr: dict[str, float], temperature_k: float, gravity: float) -> float:
+    """Pressure scale height k T / (mu m_u g)."""
+    return BOLTZMANN_J_K * temperature_k / (mean_weight(vmr) * ATOMIC_MASS_KG * gravity)
+
+
 def point_heights(
     ln_k: dict[str, np.ndarray],
     vmr: dict[str, float],
@@ -128,13 +139,13 @@ def point_heights(
 ) -> np.ndarray:
     """Effective height of each point over the 10 mbar radius, in scale heights at that radius.
 
-    `ln_k` maps species to `ln_cross_sections` at `LINE_PRESSURES_BAR`; `pair_cm5` is the collision-induced
+    `ln_k` maps species to `ln_cross_sections` at `LINE_PRESSURES_BAR` (species without lines here are left out);
+    `pair_cm5` is the collision-induced
     coefficient of H2 with H2. Everything below the deck is opaque.
     """
     background = 1 - sum(vmr.values())
     share = {"H2": 0.85 * background, "He": 0.15 * background}
-    weight = sum(MASS[name] * x for name, x in (share | vmr).items())
-    scale_m = BOLTZMANN_J_K * temperature_k / (weight * ATOMIC_MASS_KG * gravity)
+    scale_m = scale_height_m(vmr, temperature_k, gravity)
     ln_p = np.linspace(
         np.log(deck_bar), np.log(TOP_BAR), int(np.log(deck_bar / TOP_BAR) * levels_per_e_fold) + 1
     )
@@ -143,9 +154,9 @@ def point_heights(
     density_cm3 = np.exp(ln_p) * 0.1 / (BOLTZMANN_J_K * temperature_k)
     rayleigh = share["H2"] * hydrogen_rayleigh_cm2(points_cm1) + share["He"] * helium_rayleigh_cm2(points_cm1)
     k = rayleigh[:, None] + pair_cm5 * share["H2"] ** 2 * density_cm3[None, :]
-    for name, x in vmr.items():
-        inside = np.clip(ln_p, *np.log(LINE_PRESSURES_BAR[[0, -1]]))
-        k = k + x * np.exp(CubicSpline(np.log(LINE_PRESSURES_BAR), ln_k[name], axis=1)(inside))
+    inside = np.clip(ln_p, *np.log(LINE_PRESSURES_BAR[[0, -1]]))
+    for name, values in ln_k.items():
+        k = k + vmr[name] * np.exp(CubicSpline(np.log(LINE_PRESSURES_BAR), values, axis=1)(inside))
     ln_extinction = np.log(100 * density_cm3 * k)  # per metre
     tau = np.exp(ln_extinction) @ chord_weights(r).T
     annuli = np.trapezoid(2 * r * -np.expm1(-tau), r, axis=1)

@@ -2,9 +2,12 @@
 
 from __future__ import annotations
 
+import multiprocessing
+import signal
 import time
 from collections.abc import Callable
 from concurrent.futures import Executor, ProcessPoolExecutor, as_completed
+from concurrent.futures.process import BrokenProcessPool
 from dataclasses import asdict, replace
 from itertools import pairwise
 from pathlib import Path
@@ -13,7 +16,7 @@ import numpy as np
 from scipy.special import chdtrc
 
 from transit.atmosphere import background_molecular_weight, scale_height_depth, scale_height_m
-from transit.errors import SettingError
+from transit.errors import SettingError, WorkerError
 from transit.evidence import CombinedEvidence, SamplerSettings, combine_runs
 from transit.hypotheses import Hypothesis, limb_state, physical, sampled_hypotheses
 from transit.linear import linear_posterior
@@ -75,6 +78,8 @@ def check_spectrum(
     ------
     SettingError
         If a species is unknown, the priors cannot hold, or nothing can be tested.
+    WorkerError
+        If a worker process died.
     OpacityTableError
         If a table is missing or altered.
     """
@@ -92,7 +97,7 @@ def check_spectrum(
 
     own_pool = None
     if executor is None and workers > 1:
-        executor = own_pool = ProcessPoolExecutor(workers)
+        executor = own_pool = ProcessPoolExecutor(workers, initializer=_leave_quietly)
     try:
         fits = _fit_all(problem, hypotheses, seed, n_runs, settings, False, executor, progress)
         clock["fitted"] = time.perf_counter()
@@ -100,6 +105,14 @@ def check_spectrum(
         if _best(fits).p_chi2 < POOR_FIT_P:
             inflated = _fit_all(problem, hypotheses, seed, n_runs, settings, True, executor, progress)
             clock["inflated"] = time.perf_counter()
+    except BrokenProcessPool as error:
+        raise WorkerError(
+            "A worker process died while fitting, perhaps for want of memory. Run again with --workers 1."
+        ) from error
+    except KeyboardInterrupt:
+        for child in multiprocessing.active_children():
+            child.terminate()
+        raise
     finally:
         if own_pool is not None:
             own_pool.shutdown(cancel_futures=True)
@@ -130,6 +143,11 @@ def check_spectrum(
         warnings=selection.notes + _warnings(problem, fits, bool(inflated)),
         timing={b: clock[b] - clock[a] for a, b in pairwise(stages)},
     )
+
+
+def _leave_quietly() -> None:
+    """Let an interrupt end a worker without a traceback; the parent process reports it."""
+    signal.signal(signal.SIGINT, signal.SIG_DFL)
 
 
 def _nothing_to_test(selection: Selection) -> str:

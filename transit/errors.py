@@ -43,3 +43,7 @@ class OutOfTableError(TransitError, ValueError):
 
 class OutputError(TransitError, OSError):
     """A result cannot be written where it was asked for."""
+
+
+class WorkerError(TransitError, RuntimeError):
+    """A worker process died before its fit was done."""

@@ -48,6 +48,8 @@ _STRATA = 5
 _LN_UMBRELLA = 8.0
 # Temperatures between prior and posterior; a peak of ln L = 10 000 takes about 20.
 _MAX_STAGES = 40
+# Heavy draws that get a local approximation after each adaptation round.
+_OUTLIERS = 8
 _BURN_SEGMENTS = 5
 # Largest number of chain draws in a fit.
 _FIT_DRAWS = 3000
@@ -302,7 +304,7 @@ def estimate_evidence(
     strata = _Strata(stratum_dim)
     explored, ln_explored = _explore(pool, strata, budget, seeds[1], rng, chain_hook)
     peaks = _find_peaks(target, explored, ln_explored, stratum_dim, starts_z, budget.climb_steps)
-    wide = _adapt(pool, explored, ln_explored, peaks, budget, rng)
+    wide, peaks = _adapt(pool, explored, ln_explored, peaks, budget, rng)
     chain = _produce(pool, wide, budget, seeds[2], rng, chain_hook)
     half = len(chain.positions) // 2
     frozen = _final_mixture(pool, chain.positions[:half], peaks, rng)
@@ -648,8 +650,7 @@ def _find_peaks(
         lower = np.vstack([lower, np.full_like(extra, -np.inf)])
         upper = np.vstack([upper, np.full_like(extra, np.inf)])
     near = ln_explored > ln_explored.max() - 3 * dim - 10
-    spread = np.cov(explored[near].T).reshape(dim, dim) if near.sum() > 5 * dim else np.eye(dim)
-    scale = np.linalg.cholesky(spread + 1e-8 * np.eye(dim))
+    scale = _local_scale(explored[near])
     tops, ln_tops = climb(target.ln_posterior, starts, scale, lower, upper, n_steps)
     covariances = local_covariances(target.ln_posterior, tops, ln_tops, scale)
     return _peak_mixture(tops, ln_tops, covariances)
@@ -807,24 +808,56 @@ def _adapt(
     peaks: Mixture | None,
     budget: Budget,
     rng: np.random.Generator,
-) -> Mixture:
+) -> tuple[Mixture, Mixture | None]:
     """Population Monte Carlo (Cappe et al. 2008): refit the proposal to weighted draws, and draw again.
 
-    The pool keeps the draws; the last proposal is returned. Weights are truncated for the fits.
+    The pool keeps the draws; the last proposal and the local approximations are returned. Weights are truncated
+    for the fits.
     """
     # Walkers stuck far below the rest would only waste components.
     near = np.flatnonzero(ln_explored > ln_explored.max() - 3 * pool.target.n_dim - 10)
     near = rng.permutation(near)[:_FIT_DRAWS]
     chain_draws = explored[near]
-    for _ in range(budget.rounds):
+    scale = _local_scale(chain_draws)
+    for number in range(budget.rounds):
         draws, shares = _fit_set(pool, chain_draws)
         core = choose_mixture(draws, shares, rng, dof=3.0, thin=CHAIN_THIN)
         # Early proposals are wide: a draw too many costs little, a region without draws is lost.
         proposal = _with_safety(core.widened(1.5), peaks, prior_share=0.1, peak_share=0.2)
         own = importance_estimate(pool.add(proposal, budget.round_draws, rng))
-        if own[2] > 0.3 * budget.round_draws:
+        if own[2] > 0.3 * budget.round_draws or number == budget.rounds - 1:
             break
-    return proposal
+        if budget.climb_steps:
+            found = _cover_outliers(pool, scale)
+            peaks = found if peaks is None else combine_mixtures([(1.0, peaks), (1.0, found)])
+    return proposal, peaks
+
+
+def _cover_outliers(pool: _Pool, scale: np.ndarray) -> Mixture:
+    """Local approximations at the heaviest draws of the pool: regions that the proposals so far miss.
+
+    The idea of incremental mixture importance sampling (Raftery & Bao 2010, Biometrics 66, 1162), with curvature
+    in place of neighbours.
+    """
+    heavy = np.argsort(-pool.ln_weights(), kind="stable")
+    white = np.linalg.solve(scale, pool.draws[heavy[:200]].T).T
+    chosen: list[int] = []
+    for i in range(len(white)):
+        # One representative of each group of draws within one width or so.
+        if all(np.sum((white[i] - white[j]) ** 2) > len(scale) for j in chosen):
+            chosen.append(i)
+        if len(chosen) == _OUTLIERS:
+            break
+    starts = pool.draws[heavy[chosen]]
+    covariances = local_covariances(pool.target.ln_posterior, starts, pool.ln_post[heavy[chosen]], scale)
+    return Mixture(np.ones(len(starts)), starts, covariances, np.full(len(starts), 5.0))
+
+
+def _local_scale(draws: np.ndarray) -> np.ndarray:
+    """Lower triangular factor (D, D) of the covariance of draws (N, D), or the prior's if they are too few."""
+    dim = draws.shape[1]
+    spread = np.cov(draws.T).reshape(dim, dim) if len(draws) > 5 * dim else np.eye(dim)
+    return np.linalg.cholesky(spread + 1e-8 * np.eye(dim))
 
 
 def _fit_set(pool: _Pool, chain_draws: np.ndarray) -> tuple[np.ndarray, np.ndarray]:

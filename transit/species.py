@@ -13,6 +13,8 @@ from transit.opacity import OpacityTable, available, load_table
 from transit.records import DepthSpectrum, Priors, System
 
 MOST_DEFAULT_SPECIES = 6
+# A table serves a planet when it is trusted over at least this share of the prior range of temperature.
+LEAST_TRUSTED_SHARE = 0.5
 
 
 @dataclass(frozen=True)
@@ -45,16 +47,21 @@ def prior_temperature_k(system: System, priors: Priors) -> tuple[float, float]:
 
 
 def bins_in_trusted_bands(
-    spectrum: DepthSpectrum, table: OpacityTable, temperature_k: float
+    spectrum: DepthSpectrum, table: OpacityTable, temperature_range_k: tuple[float, float]
 ) -> tuple[np.ndarray, list[dict]]:
-    """Which bins lie inside known bands of a species where its table is trusted at a temperature.
+    """Which bins lie inside known bands of a species where its table is trusted over most temperatures.
 
     Returns
     -------
     (ndarray of bool, shape (N,), list of dict)
-        And the trusted ranges that hold at that temperature.
+        And the trusted ranges that hold over at least half of the temperature range.
     """
-    usable = [r for r in table.trusted if r["t_min_k"] <= temperature_k <= r["t_max_k"]]
+    low_k, high_k = temperature_range_k
+    usable = [
+        r
+        for r in table.trusted
+        if min(high_k, r["t_max_k"]) - max(low_k, r["t_min_k"]) >= LEAST_TRUSTED_SHARE * (high_k - low_k)
+    ]
     inside = np.zeros(spectrum.n_bins, bool)
     low_bin = spectrum.wavelength_um - spectrum.half_width_um
     high_bin = spectrum.wavelength_um + spectrum.half_width_um
@@ -77,8 +84,8 @@ def select_species(
     spectrum : DepthSpectrum
     system : System
     requested : tuple of str or None
-        None: at most six species with trusted bands inside the spectrum at the equilibrium temperature, those
-        with most bins in their bands first.
+        None: at most six species with trusted bands inside the spectrum at the planet's temperature, those with
+        most bins in their bands first.
     tables : Path, optional
 
     Returns
@@ -99,26 +106,25 @@ def select_species(
             ]
             hint = f" Did you mean {close[0]}?" if close else ""
             raise SettingError(f"Unknown species {name!r}; known are {', '.join(known)}.{hint}")
-    temperature = system.equilibrium_temperature_k
+    wanted = prior_temperature_k(system, system.priors)
     found: dict[str, tuple[int, OpacityTable, list[dict]]] = {}
     untested: dict[str, str] = {}
     for name in names:
         table = load_table(name, tables)
-        inside, usable = bins_in_trusted_bands(spectrum, table, temperature)
+        inside, usable = bins_in_trusted_bands(spectrum, table, wanted)
         count = int(inside.sum())
         if count > 0:
             found[name] = (count, table, usable)
         elif requested is not None:
-            untested[name] = _why_untested(name, table, temperature)
+            untested[name] = _why_untested(name, table, wanted)
     ranked = sorted(found, key=lambda name: -found[name][0])
     chosen = ranked if requested is not None else ranked[:MOST_DEFAULT_SPECIES]
     species = tuple(name for name in names if name in chosen)
     reasons = {
         name: f"{found[name][0]} bins inside its bands"
-        + (" (chosen by default)" if requested is None else " (asked for)")
+        + (", chosen by default" if requested is None else ", asked for")
         for name in species
     }
-    wanted = prior_temperature_k(system, system.priors)
     low, high, notes = _clip_temperature(wanted, {name: found[name][2] for name in species}, tables)
     coverage = {}
     for name in species:
@@ -138,13 +144,13 @@ def select_species(
     return Selection(species, reasons, untested, (low, high), coverage, notes)
 
 
-def _why_untested(name: str, table: OpacityTable, temperature_k: float) -> str:
+def _why_untested(name: str, table: OpacityTable, wanted: tuple[float, float]) -> str:
     ranges = "; ".join(
         f"{r['low_um']:g}-{r['high_um']:g} um at {r['t_min_k']:g}-{r['t_max_k']:g} K" for r in table.trusted
     )
     return (
-        f"{name}: no bin lies inside one of its bands where its table is trusted at {temperature_k:.0f} K "
-        f"(trusted: {ranges})."
+        f"{name}: no bin lies inside one of its bands where its table is trusted over most of "
+        f"{wanted[0]:.0f}-{wanted[1]:.0f} K (trusted: {ranges})."
     )
 
 
