@@ -30,6 +30,7 @@ from transit.mixtures import (
     choose_mixture,
     combine_mixtures,
     effective_size,
+    fit_mixture,
     pareto_shape,
     standard_normal_mixture,
     systematic_resample,
@@ -52,7 +53,9 @@ _MAX_STAGES = 40
 _OUTLIERS = 8
 _BURN_SEGMENTS = 5
 # Largest number of chain draws in a fit.
-_FIT_DRAWS = 3000
+_FIT_DRAWS = 2500
+# Numbers of components to try.
+_SIZES = (1, 2, 4, 7, 11)
 # Chain draws are correlated: the criterion that chooses the number of components counts one in this many.
 CHAIN_THIN = 5.0
 # An evidence rests on at least this effective number of weighted draws.
@@ -122,16 +125,16 @@ class SamplerSettings:
     def standard(cls) -> SamplerSettings:
         """For results: at most about 35 000 likelihood calls per seed for D <= 4, 120 000 for D >= 10."""
         return cls(
-            few=Budget(1000, 10, 48, 60, 12, 2, 2000, 150, 4000, 4, 0.02),
-            many=Budget(2000, 12, 100, 150, 20, 3, 4000, 250, 10000, 4, 0.04),
+            few=Budget(1000, 10, 48, 60, 12, 3, 1500, 120, 4000, 4, 0.015),
+            many=Budget(2000, 12, 100, 120, 20, 6, 4000, 150, 10000, 3, 0.04),
         )
 
     @classmethod
     def quick(cls) -> SamplerSettings:
         """For a first look: at most about 8 000 likelihood calls per seed for D <= 4, 20 000 for D >= 10."""
         return cls(
-            few=Budget(500, 5, 32, 40, 8, 1, 1000, 60, 1500, 2, 0.05),
-            many=Budget(1000, 5, 50, 40, 10, 2, 2000, 50, 3000, 1, 0.1),
+            few=Budget(500, 5, 32, 40, 6, 2, 500, 50, 1200, 2, 0.05),
+            many=Budget(1000, 5, 48, 40, 8, 3, 1000, 50, 3000, 1, 0.1),
         )
 
     def budget(self, n_dim: int) -> Budget:
@@ -561,8 +564,8 @@ def _tempered(target: _Target, strata: _Strata, power: float, z: np.ndarray) -> 
 def _fit_guide(draws: np.ndarray, shares: np.ndarray, rng: np.random.Generator) -> Mixture:
     """Mixture that guides the moves of a chain, fitted to draws (N, D) with weights (N,)."""
     used = np.flatnonzero(shares > 1e-4 * shares.max())
-    used = rng.permutation(used)[:_FIT_DRAWS]
-    core = choose_mixture(draws[used], shares[used], rng, sizes=(1, 2, 3, 4, 6, 8), dof=5.0, thin=CHAIN_THIN)
+    used = rng.permutation(used)[: _FIT_DRAWS // 2]
+    core = choose_mixture(draws[used], shares[used], rng, sizes=(1, 2, 4, 8), dof=5.0, thin=CHAIN_THIN)
     return _with_safety(core.widened(1.2), None, prior_share=0.1, peak_share=0.0)
 
 
@@ -819,9 +822,14 @@ def _adapt(
     near = rng.permutation(near)[:_FIT_DRAWS]
     chain_draws = explored[near]
     scale = _local_scale(chain_draws)
+    core = None
     for number in range(budget.rounds):
-        draws, shares = _fit_set(pool, chain_draws)
-        core = choose_mixture(draws, shares, rng, dof=3.0, thin=CHAIN_THIN)
+        draws, shares = _fit_set(pool, chain_draws, rng)
+        # The number of components is looked for at first and once more, when the pool has matured.
+        if core is None or number == budget.rounds // 2:
+            core = choose_mixture(draws, shares, rng, sizes=_SIZES, dof=3.0, thin=CHAIN_THIN)
+        else:
+            core, _ = fit_mixture(draws, shares, core, max_iterations=10)
         # Early proposals are wide: a draw too many costs little, a region without draws is lost.
         proposal = _with_safety(core.widened(1.5), peaks, prior_share=0.1, peak_share=0.2)
         own = importance_estimate(pool.add(proposal, budget.round_draws, rng))
@@ -860,14 +868,18 @@ def _local_scale(draws: np.ndarray) -> np.ndarray:
     return np.linalg.cholesky(spread + 1e-8 * np.eye(dim))
 
 
-def _fit_set(pool: _Pool, chain_draws: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+def _fit_set(
+    pool: _Pool, chain_draws: np.ndarray, rng: np.random.Generator
+) -> tuple[np.ndarray, np.ndarray]:
     """Draws (N, D) and shares (N,) for a fit: a chain, and the pool with as much say as its effective size."""
-    ln_weights = truncate(pool.ln_weights())
-    weights = _relative(ln_weights)
+    weights = _relative(truncate(pool.ln_weights()))
     trust = min(effective_size(weights) * CHAIN_THIN, float(_FIT_DRAWS))
-    used = weights > 1e-6
-    shares = trust * weights[used] / weights.sum()
-    return np.vstack([chain_draws, pool.draws[used]]), np.concatenate([np.ones(len(chain_draws)), shares])
+    # Thinned in proportion to the root of the weight: light draws still mark the flanks, heavy ones are not lost.
+    root = np.sqrt(weights)
+    kept, copies = np.unique(systematic_resample(root, _FIT_DRAWS, rng), return_counts=True)
+    shares = root[kept] * copies
+    shares *= trust / shares.sum()
+    return np.vstack([chain_draws, pool.draws[kept]]), np.concatenate([np.ones(len(chain_draws)), shares])
 
 
 def _with_safety(core: Mixture, peaks: Mixture | None, prior_share: float, peak_share: float) -> Mixture:
@@ -915,8 +927,8 @@ def _final_mixture(
 ) -> Mixture:
     """Proposal of the estimates, from the first half of the chain (S, W, D) and the weighted draws."""
     chain_draws = rng.permutation(first_half.reshape(-1, pool.target.n_dim))[:_FIT_DRAWS]
-    draws, shares = _fit_set(pool, chain_draws)
-    core = choose_mixture(draws, shares, rng, sizes=(1, 2, 3, 4, 6, 8, 12, 16), dof=5.0, thin=CHAIN_THIN)
+    draws, shares = _fit_set(pool, chain_draws, rng)
+    core = choose_mixture(draws, shares, rng, sizes=(*_SIZES, 16), dof=5.0, thin=CHAIN_THIN)
     return _with_safety(core, peaks, prior_share=0.05, peak_share=0.05)
 
 

@@ -10,6 +10,9 @@ import numpy as np
 
 from transit.mixtures import Mixture
 
+# Stands for -inf inside emcee, which would subtract one infinity from another where two points lie outside.
+_FLOOR = -1e200
+
 
 @dataclass(frozen=True, eq=False)
 class EnsembleChain:
@@ -127,13 +130,17 @@ def run_ensemble(
     EnsembleChain
     """
     n_walkers, n_dim = start.shape
-    sampler = emcee.EnsembleSampler(n_walkers, n_dim, ln_prob, moves=moves, vectorize=True)
+
+    def floored(z: np.ndarray) -> np.ndarray:
+        return np.maximum(ln_prob(z), _FLOOR)
+
+    sampler = emcee.EnsembleSampler(n_walkers, n_dim, floored, moves=moves, vectorize=True)
     sampler.random_state = sampler_state(sequence)
     # emcee refuses starts that are strongly correlated; narrow posteriors are just that, and the moves cope.
     sampler.run_mcmc(start.copy(), n_steps, skip_initial_state_check=True, progress=False)
-    return EnsembleChain(
-        sampler.get_chain(), sampler.get_log_prob(), float(np.mean(sampler.acceptance_fraction))
-    )
+    found = sampler.get_log_prob()
+    found[found <= _FLOOR] = -np.inf
+    return EnsembleChain(sampler.get_chain(), found, float(np.mean(sampler.acceptance_fraction)))
 
 
 def autocorrelation_steps(series: np.ndarray) -> float:

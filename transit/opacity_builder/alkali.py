@@ -21,9 +21,10 @@ GAMMA_2000K = {"Na": 0.071, "K": 0.14}
 
 
 def read_doublet(path: Path, atom: str) -> pd.DataFrame:
-    """Read the two resonance lines of an atom (columns nu_vac_cm-1, f_lu, damping_gamma_rad_s-1)."""
+    """Read the two resonance lines of an atom: columns centre_cm1, f_lu, damping_s1."""
     table = pd.read_csv(path)
-    return table[table["species"] == f"{atom} I"]
+    names = {"nu_vac_cm-1": "centre_cm1", "f_lu": "f_lu", "damping_gamma_rad_s-1": "damping_s1"}
+    return table[table["species"] == f"{atom} I"].rename(columns=names)[list(names.values())]
 
 
 def doublet_cross_section_cm2(
@@ -43,11 +44,10 @@ def doublet_cross_section_cm2(
     """
     total = np.zeros_like(grid_cm1)
     for line in doublet.itertuples(index=False):
-        centre, f_lu, damping = line[3], line[7], line[9]
-        natural = damping / (4 * np.pi * 2.99792458e10)
+        natural = line.damping_s1 / (4 * np.pi * 2.99792458e10)
         gamma = natural + GAMMA_2000K[atom] * (2000.0 / temperature_k) ** 0.7 * pressure_bar / ATM_BAR
-        sigma = doppler_hwhm_cm1(centre, temperature_k, MOLAR_MASS[atom]) / np.sqrt(2 * np.log(2))
-        distance = grid_cm1 - centre
+        sigma = doppler_hwhm_cm1(line.centre_cm1, temperature_k, MOLAR_MASS[atom]) / np.sqrt(2 * np.log(2))
+        distance = grid_cm1 - line.centre_cm1
         profile = np.where(np.abs(distance) < cutoff_cm1, voigt_profile(distance, sigma, gamma), 0.0)
-        total += STRENGTH_PER_F_CM * f_lu * profile
+        total += STRENGTH_PER_F_CM * line.f_lu * profile
     return total
