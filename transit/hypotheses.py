@@ -74,7 +74,7 @@ def parameters(
     trace = [name for name in hypothesis.species if name != background]
     ranges = {name: vmr_range(priors, name) for name in trace}
     total = sum(10**high for _, high in ranges.values())
-    if total >= 1:
+    if total >= 1 - 1e-9:  # ten times a tenth falls short of one by rounding
         raise SettingError(
             f"The upper limits of log10_vmr let {', '.join(trace)} add up to {total:.2f} of the gas; "
             "lower them so that their sum stays below 1."

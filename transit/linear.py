@@ -138,17 +138,32 @@ def linear_posterior(
     chosen = rng.choice(len(slope), n_draws, p=probability / probability.sum())
     radius = result.radius[chosen] + result.radius_err[chosen] * rng.standard_normal(n_draws)
     best = int(np.argmax(result.ln_evidence))
-    quoted = likelihood.collapse(
-        np.zeros((1, n)), np.zeros((1, n)), 1.0, None if extra is None else extra[best : best + 1]
-    )
+    best_slope, best_radius, chi2 = _quoted_minimum(likelihood, abscissa, slope_limit, float(slope[best]))
     return LinearPosterior(
         ln_evidence=ln_evidence,
         slope=slope[chosen],
         radius=radius,
         error_factor=factor[chosen],
-        best=(float(slope[best]), float(quoted.radius[0]), float(factor[best])),
-        chi2=float(quoted.chi2[0]),
+        best=(best_slope, best_radius, float(factor[best])),
+        chi2=chi2,
     )
+
+
+def _quoted_minimum(likelihood, abscissa, limit, near):
+    """Slope, radius and chi-square of the best fit at the quoted errors; chi-square is a parabola in the slope."""
+    n = len(likelihood.depth)
+    if abscissa is None:
+        flat = likelihood.collapse(np.zeros((1, n)), np.zeros((1, n)))
+        return 0.0, float(flat.radius[0]), float(flat.chi2[0])
+    step = 0.05 * limit
+    trial = np.array([near - step, near, near + step])
+    zeros = np.zeros((3, n))
+    left, middle, right = likelihood.collapse(zeros, zeros, 1.0, trial[:, None] * abscissa).chi2
+    shift = 0.5 * step * (left - right) / (left - 2 * middle + right)
+    trial = np.clip(np.array([near, near + shift]), -limit, limit)
+    result = likelihood.collapse(zeros[:2], zeros[:2], 1.0, trial[:, None] * abscissa)
+    best = int(np.argmin(result.chi2))
+    return float(trial[best]), float(result.radius[best]), float(result.chi2[best])
 
 
 def _slope_nodes(likelihood, abscissa, limit, factor):

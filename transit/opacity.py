@@ -237,10 +237,15 @@ def load_table(species: str, folder: Path | None = None) -> OpacityTable:
             f"{path} is not the table that was registered (its SHA-256 differs from {REGISTRY}). "
             "Reinstall leadline, or build the tables again."
         )
-    with zipfile.ZipFile(io.BytesIO(data)) as archive:
-        header = json.loads(archive.read("header.json"))
-        stored = np.load(io.BytesIO(archive.read("values.npy")), allow_pickle=False)
-        means = np.load(io.BytesIO(archive.read("means.npy")), allow_pickle=False)
+    try:
+        with zipfile.ZipFile(io.BytesIO(data)) as archive:
+            header = json.loads(archive.read("header.json"))
+            stored = np.load(io.BytesIO(archive.read("values.npy")), allow_pickle=False)
+            means = np.load(io.BytesIO(archive.read("means.npy")), allow_pickle=False)
+    except (zipfile.BadZipFile, KeyError, ValueError) as error:
+        raise OpacityTableError(
+            f"{path} is not an opacity table ({error}). Build the tables again."
+        ) from error
     if header.get("format") != FORMAT:
         raise OpacityTableError(f"{path} has format {header.get('format')!r}, expected {FORMAT!r}.")
     if (header["bands_per_e_fold"], header["grid_start_cm1"]) != (BANDS_PER_E_FOLD, GRID_START_CM1):

@@ -62,19 +62,20 @@ def opaque_height(tau):
 
 def test_depths_of_jupiter_and_earth():
     """The nominal radii of Prsa et al. 2016 (AJ 152, 41) give the depths of Jupiter and Earth before the Sun."""
-    assert (JUPITER_RADIUS_M / SOLAR_RADIUS_M) ** 2 / PPM == pytest.approx(10560, abs=0.5)
-    assert (EARTH_RADIUS_M / SOLAR_RADIUS_M) ** 2 / PPM == pytest.approx(84.05, abs=0.005)
+    jupiter_ppm = (JUPITER_RADIUS_M / SOLAR_RADIUS_M) ** 2 / PPM
+    earth_ppm = (EARTH_RADIUS_M / SOLAR_RADIUS_M) ** 2 / PPM
+    assert jupiter_ppm == pytest.approx(10560, abs=0.5)
+    assert earth_ppm == pytest.approx(84.05, abs=0.005)
 
 
 def test_constants_agree_with_each_other():
     """The second radiation constant is h c / k (CODATA 2018: 1.438776877 cm K)."""
-    assert PLANCK_J_S * LIGHT_SPEED_M_S / BOLTZMANN_J_K * 100 == pytest.approx(
-        SECOND_RADIATION_CM_K, rel=1e-9
-    )
+    second_cm_k = PLANCK_J_S * LIGHT_SPEED_M_S / BOLTZMANN_J_K * 100
+    assert second_cm_k == pytest.approx(SECOND_RADIATION_CM_K, rel=1e-9)
 
 
 def test_gravity_of_the_earth():
-    """G M / R^2 at the equator, without rotation: 9.798 m/s2 (Moritz 2000, J. Geodesy 74, 128: GM, radius)."""
+    """G M / R^2 at the equator, with the GM and radius of WGS 84 (from memory)."""
     assert gravity_m_s2(EARTH_MASS_KG, EARTH_RADIUS_M) == pytest.approx(3.986004418e14 / 6378137**2, rel=1e-4)
 
 
@@ -150,9 +151,7 @@ def test_system_gravity_and_observed_radius():
     assert planet_gravity_m_s2(system) == pytest.approx(9.193, abs=6e-4)
     assert planet_gravity_m_s2(system, 2 * 1.359 * JUPITER_RADIUS_M) == pytest.approx(9.193 / 4, abs=2e-4)
     # Depth 0.0146 is a radius ratio of 0.120830.
-    assert observed_radius_m(system, 0.0146) == pytest.approx(
-        0.120830 * 1.155 * SOLAR_RADIUS_M, rel=1e-5
-    )
+    assert observed_radius_m(system, 0.0146) == pytest.approx(0.120830 * 1.155 * SOLAR_RADIUS_M, rel=1e-5)
 
 
 def test_mean_molecular_weight():
@@ -460,7 +459,9 @@ def synthetic_tables(folder, ln_cross_section_at_10_mbar, exponent, ln_collision
         first, count = near if name == "H2O" else everywhere
         shape = (count, len(temperature_k), len(nodes), slices)
         cross_section = np.broadcast_to(values[None, None, :, None], shape)
-        table = OpacityTable(name, first, temperature_k, nodes, cross_section, cross_section[:, :, 0, 0], header)
+        table = OpacityTable(
+            name, first, temperature_k, nodes, cross_section, cross_section[:, :, 0, 0], header
+        )
         write_table(folder / f"{name}.opacity", table)
     write_registry(folder)
     return folder

@@ -77,8 +77,8 @@ def test_three_parameters_against_quadrature():
         full[:, 2] = -6.0  # least haze of the prior
         return problem.ln_likelihood(water, full)
 
-    expected = by_quadrature(ln_likelihood, (20, 72, 72))
-    coarser = by_quadrature(ln_likelihood, (16, 60, 60))
+    expected = by_quadrature(ln_likelihood, (16, 64, 64))
+    coarser = by_quadrature(ln_likelihood, (12, 54, 54))
     assert coarser == pytest.approx(expected, abs=0.01)  # the quadrature itself has converged
     found = combined(ln_likelihood, 3)
     assert found.sampling["converged"], found.sampling["flags"]
@@ -115,7 +115,7 @@ def test_error_inflation_against_quadrature():
         full[:, [0, 1, 4]] = z
         return problem.ln_likelihood(continuum, full, inflate=True)
 
-    expected = by_quadrature(ln_likelihood, (16, 40, 40))
+    expected = by_quadrature(ln_likelihood, (12, 36, 36))
     task = FitTask(problem, continuum, 5, 0, SamplerSettings.standard(), inflate=True)
     found = combine_runs([run_fit(task), run_fit(dataclasses.replace(task, run=1))], 5)
     # The two parameters of no width leave the evidence as it is.
@@ -151,10 +151,9 @@ def test_seven_parameters_against_dynesty():
     assert error < 0.3
 
 
-@pytest.mark.parametrize("name", ["continuum", "H2O"])
-def test_fits_repeat_for_the_same_seed(name):
+def test_fits_repeat_for_the_same_seed():
     """The same task gives the same numbers; another run of it gives others that agree."""
-    hypothesis = Hypothesis(name, () if name == "continuum" else (name,))
+    hypothesis = Hypothesis("H2O", ("H2O",))
     edges = np.linspace(1.12, 1.66, 8)
     problem = made_up_problem(edges, ("H2O",), [0.0, 0.1, -1.6, 0.0], Hypothesis("continuum", ()), 90.0, 66)
     task = FitTask(problem, hypothesis, 3, 0, SamplerSettings.quick())

@@ -177,9 +177,7 @@ def test_bin_factor():
     factor = np.random.default_rng(9).uniform(0.98, 1.04, (3, N_BINS))
     found = DepthLikelihood(spectrum, MEDIAN).collapse(mean, square, bin_factor=factor).ln_evidence
     for k in range(3):
-        expected = by_quadrature(
-            spectrum, mean[k], square[k], dense_covariance(spectrum), factor=factor[k]
-        )
+        expected = by_quadrature(spectrum, mean[k], square[k], dense_covariance(spectrum), factor=factor[k])
         assert found[k] == pytest.approx(expected, abs=1e-5)
 
 
@@ -204,7 +202,9 @@ def test_infinite_error_is_leaving_out():
     blind[4] = 1e3
     keep = np.arange(N_BINS) != 4
     wide = DepthSpectrum(spectrum.wavelength_um, spectrum.half_width_um, spectrum.depth, blind)
-    without = DepthSpectrum(*(getattr(spectrum, n)[keep] for n in ("wavelength_um", "half_width_um", "depth", "depth_err")))
+    without = DepthSpectrum(
+        *(getattr(spectrum, n)[keep] for n in ("wavelength_um", "half_width_um", "depth", "depth_err"))
+    )
     one = DepthLikelihood(wide, MEDIAN).collapse(mean, square)
     two = DepthLikelihood(without, MEDIAN).collapse(mean[:, keep], square[:, keep])
     assert np.diff(one.ln_evidence) == pytest.approx(np.diff(two.ln_evidence), abs=1e-6)

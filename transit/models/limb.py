@@ -10,7 +10,7 @@ from scipy.interpolate import PchipInterpolator
 
 from transit.atmosphere import BACKGROUNDS, REFERENCE_PRESSURE_BAR, mean_molecular_weight, scale_height_m
 from transit.models.grid import SLICES, FineGrid, cell_key, cell_slices, slice_orders
-from transit.opacity import LN_FLOOR, OpacityTable, load_table
+from transit.opacity import LN_FLOOR, LN_LEAST, OpacityTable, load_table
 from transit.rayleigh import hydrogen_cm2, mixture_cm2
 from transit.units import BOLTZMANN_J_K
 
@@ -108,41 +108,38 @@ class LimbModel:
         self.temperature_k = np.linspace(low, high, count)
         self.node_ln_bar = NODE_LOG10_BAR * np.log(10)
         self._table = self._prepare(tables)
-        self._middle = self.node_ln_bar.mean()
+        self._middle = 0.5 * (self.node_ln_bar[0] + self.node_ln_bar[-1])
         self._half = (self.node_ln_bar[-1] - self.node_ln_bar[0]) / 2
-        scaled = (self.node_ln_bar - self._middle) / self._half
-        self._to_polynomial = np.linalg.inv(np.vander(scaled, increasing=True)).astype(np.float32)
+        self._nodes = (self.node_ln_bar - self._middle) / self._half  # from -1 to 1
+        self._to_polynomial = np.linalg.inv(np.vander(self._nodes, increasing=True)).astype(np.float32)
         self._ln_wavelength = np.log(grid.wavelength_um / HAZE_REFERENCE_UM).astype(np.float32)
         self._ln_haze_unit = float(np.log(hydrogen_cm2(HAZE_REFERENCE_UM) / CROSS_SECTION_UNIT_CM2))
 
     def _prepare(self, tables) -> np.ndarray:
-        """Cross sections in single precision, shape (T, 1 + species, J, SLICES, C); row 0 is the continuum.
+        """Cross sections in single precision, shape (T, 2 + species, J, SLICES, C).
 
-        Both temperature neighbours of an atmosphere lie side by side, for one matrix product.
+        Row 0 is Rayleigh scattering and row 1 collision-induced absorption of the background gas. Both temperature
+        neighbours of an atmosphere lie side by side, for one matrix product.
         """
         grid = self.grid
-        shape = (
-            len(self.temperature_k),
-            1 + len(self.species),
-            len(self.node_ln_bar),
-            SLICES,
-            len(grid.bands),
-        )
+        n_rows = 2 + len(self.species)
+        shape = (len(self.temperature_k), n_rows, len(self.node_ln_bar), SLICES, len(grid.bands))
         out = np.empty(shape, np.float32)
-        out[:, 0] = self._continuum(tables)[:, :, None, :]
+        scattering = mixture_cm2(grid.wavelength_um, BACKGROUNDS[self.background])
+        out[:, 0] = scattering / CROSS_SECTION_UNIT_CM2
+        out[:, 1] = self._collisions(tables)[:, :, None, :]
         orders = [slice_orders(len(self.species), cell_key(bands)) for bands in grid.bands]
         for row, name in enumerate(self.species):
             ln_k = cell_cross_sections(load_table(name, tables), grid, self.temperature_k, self.node_ln_bar)
             for cell, order in enumerate(orders):
                 ln_k[cell] = ln_k[cell][..., order[row]]
-            out[:, 1 + row] = np.moveaxis(np.exp(ln_k) / CROSS_SECTION_UNIT_CM2, 0, -1)
+            out[:, 2 + row] = np.moveaxis(np.exp(ln_k) / CROSS_SECTION_UNIT_CM2, 0, -1)
         return out
 
-    def _continuum(self, tables) -> np.ndarray:
-        """Rayleigh and collision-induced cross section per background molecule, 1e-26 cm2, shape (T, J, C)."""
+    def _collisions(self, tables) -> np.ndarray:
+        """Collision-induced cross section per molecule of pure background gas, 1e-26 cm2, shape (T, J, C)."""
         fractions = BACKGROUNDS[self.background]
-        shape = (len(self.temperature_k), len(self.node_ln_bar), len(self.grid.bands))
-        total = np.broadcast_to(mixture_cm2(self.grid.wavelength_um, fractions), shape).copy()
+        total = np.zeros((len(self.temperature_k), len(self.node_ln_bar), len(self.grid.bands)))
         pairs = {
             "H2-H2": fractions.get("H2", 0) ** 2,
             "H2-He": fractions.get("H2", 0) * fractions.get("He", 0),
@@ -187,8 +184,9 @@ class LimbModel:
         node = np.clip(position.astype(int), 0, len(self.temperature_k) - 2)
         share = position - node
         rest = 1 - state.vmr.sum(axis=1, keepdims=True)
-        mixing = np.concatenate([rest, state.vmr], axis=1)
-        rows = np.concatenate([[0], 1 + use])
+        # Pairs of background molecules go with the square of their share.
+        mixing = np.concatenate([rest, rest**2, state.vmr], axis=1)
+        rows = np.concatenate([[0, 1], 2 + use])
         table = self._table if len(rows) == self._table.shape[1] else self._table[:, rows]
         mean = np.empty((n_walkers, self.grid.averaging.shape[0]))
         mean_square = np.empty_like(mean)
@@ -216,7 +214,7 @@ class LimbModel:
         ln_tau_nodes = np.log(total, out=total).reshape(*total.shape[:2], -1)
         ln_tau_nodes += self._node_terms(state, walkers, ratio)[:, :, None].astype(one)
         deck = ((state.ln_deck_pressure_bar[walkers, None] - self._middle) / self._half).astype(one)
-        level = _rough_level(ln_tau_nodes)
+        level = _rough_level(ln_tau_nodes, self._nodes)
         np.minimum(level, deck, out=level)
         ln_tau, response = _cubic_at(np.matmul(self._to_polynomial, ln_tau_nodes), level, one(self._half))
         # At the deck, by the power law of the level probed.
@@ -264,32 +262,32 @@ def _chord_height_single(ln_tau):
     return tau
 
 
-def _rough_level(ln_tau):
+def _rough_level(ln_tau, nodes):
     """Level where the chord optical depth is 0.56, by straight lines between the four nodes.
 
     Parameters
     ----------
     ln_tau : ndarray, shape (W, 4, M)
         At the nodes, increasing with pressure.
+    nodes : ndarray, shape (4,)
+        Scaled ln pressures of the nodes, from -1 to 1.
 
     Returns
     -------
     ndarray, shape (W, M)
-        In units in which the nodes lie at -1, -1/3, 1/3 and 1; the end lines go on beyond them.
+        In the units of the nodes; the end lines go on beyond them.
     """
     one = np.float32
-    parts = []
-    for k in range(3):
+    limits = ((-6, 1), (0, 1), (0, 6))
+    level = np.full_like(ln_tau[:, 0], nodes[0])
+    for k, (low, high) in enumerate(limits):
         step = ln_tau[:, k + 1] - ln_tau[:, k]
         np.maximum(step, one(0.4), out=step)
         part = one(-EULER_GAMMA) - ln_tau[:, k]
         part /= step
-        parts.append(part)
-    level = np.clip(parts[0], one(-4), one(1))
-    level += np.clip(parts[1], one(0), one(1), out=parts[1])
-    level += np.clip(parts[2], one(0), one(4), out=parts[2])
-    level *= one(2 / 3)
-    level -= one(1)
+        np.clip(part, one(low), one(high), out=part)
+        part *= one(nodes[k + 1] - nodes[k])
+        level += part
     return level
 
 
@@ -373,7 +371,9 @@ def interpolate_table(
     if ln_pressure_bar is not None:
         values = PchipInterpolator(np.log(table.pressure_bar), values, axis=2)(ln_pressure_bar)
     values = PchipInterpolator(np.log(grid_k[first:last]), values, axis=1)(np.log(wanted))
-    out = np.full((len(bands), *values.shape[1:]), LN_FLOOR)
+    # Coefficients of collision pairs (cm5) are far smaller than cross sections (cm2).
+    nothing = LN_LEAST if "-" in table.species else LN_FLOOR
+    out = np.full((len(bands), *values.shape[1:]), nothing)
     out[covered] = values
     return out
 

@@ -8,9 +8,14 @@ from scipy.ndimage import uniform_filter1d
 from transit.opacity_builder.bandmeans import BAND_WIDTH_CM1, BandMeans, interpolate_temperature
 from transit.opacity_builder.linelists import LineList
 
-# Hot bands are copies of the cold ones, displaced by anharmonicity: a handful of displaced copies fills the gaps
-# between the cold lines as they do. Fixed, irregular shifts in cm-1.
-COPY_SHIFTS_CM1 = (-11.3, -7.9, -4.1, 3.7, 6.1, 9.7)
+# Hot bands are copies of the cold ones, displaced by anharmonicity: a few displaced copies fill the gaps between the
+# cold lines as they do. Three copies restored <ln k> of water lists that had been cut short to within 0.1-0.5 (the
+# cut lists alone were 0.8-3.4 too low; six copies 0.6-1.2 too high). Fixed, irregular shifts in cm-1.
+COPY_SHIFTS_CM1 = (-7.9, 3.7, 9.7)
+# A smaller share than this is a difference between the two sources, not missing lines.
+LEAST_MISSING_SHARE = 0.02
+# Limits of the rescaling of the band means to the lines at 300 K, where lists are complete.
+RESCALING_LIMITS = (0.5, 1.5)
 
 
 def missing_mean_cm2(lines: LineList, band_means: BandMeans, temperature_k: float) -> np.ndarray:
@@ -26,18 +31,29 @@ def missing_mean_cm2(lines: LineList, band_means: BandMeans, temperature_k: floa
     -------
     ndarray, shape (B,)
         cm2/molecule, zero where the lines hold as much as the band means or more.
+
+    Notes
+    -----
+    The means are first scaled, band by band, to the lines at their first temperature (300 K), where the list is
+    complete and any difference lies between the two sources.
     """
     edges = np.append(
         band_means.centre_cm1 - BAND_WIDTH_CM1 / 2, band_means.centre_cm1[-1] + BAND_WIDTH_CM1 / 2
     )
-    strength = lines.intensity_at(temperature_k)
-    summed, _ = np.histogram(lines.wavenumber_cm1, bins=edges, weights=strength)
-    have = summed / BAND_WIDTH_CM1
-    ln_mean = interpolate_temperature(
-        np.log(band_means.cross_section_cm2), band_means.temperature_k, temperature_k
-    )
-    want = np.exp(ln_mean)
-    return np.maximum(want - have, 0.0)
+
+    def summed(at_k: float) -> np.ndarray:
+        total, _ = np.histogram(lines.wavenumber_cm1, bins=edges, weights=lines.intensity_at(at_k))
+        return total / BAND_WIDTH_CM1
+
+    def measured(at_k: float) -> np.ndarray:
+        ln_values = np.log(band_means.cross_section_cm2)
+        return np.exp(interpolate_temperature(ln_values, band_means.temperature_k, at_k))
+
+    cool_k = float(band_means.temperature_k[0])
+    scale = np.clip(summed(cool_k) / measured(cool_k), *RESCALING_LIMITS)
+    want = scale * measured(temperature_k)
+    missing = want - summed(temperature_k)
+    return np.where(missing > LEAST_MISSING_SHARE * want, missing, 0.0)
 
 
 def completed(

@@ -13,6 +13,7 @@ from transit.errors import InputFileError
 from transit.units import SECOND_RADIATION_CM_K
 
 REFERENCE_TEMPERATURE_K = 296.0
+HITRAN_RECORD_LENGTH = 160
 
 # Molar masses of the isotopologues (g/mol), by HITRAN molecule and isotopologue number.
 MOLAR_MASS = {
@@ -156,17 +157,25 @@ def read_hitran(path: Path, partition_sums: dict) -> LineList:
         "energy": (45, 55), "n": (55, 59),
     }  # fmt: skip
     with _open_text(path) as stream:
-        try:
-            table = pd.read_fwf(
-                stream, colspecs=list(columns.values()), names=list(columns), header=None, dtype=float
-            )
-        except ValueError as error:
+        records = stream.read().splitlines()
+    for number, record in enumerate(records, start=1):
+        if len(record) < HITRAN_RECORD_LENGTH:
             raise InputFileError(
-                f"a HITRAN record could not be read ({error}); expected 160-character records.", str(path)
-            ) from error
+                f"the record has {len(record)} characters, expected {HITRAN_RECORD_LENGTH}; the file may be cut short.",
+                str(path),
+                number,
+            )
+    table = pd.DataFrame(
+        {
+            name: pd.to_numeric(pd.Series([record[slice(*span)] for record in records]), errors="coerce")
+            for name, span in columns.items()
+        }
+    )
     if table.isna().any(axis=None):
-        row = int(np.flatnonzero(table.isna().any(axis=1))[0]) + 1
-        raise InputFileError("a HITRAN record is cut short; expected 160 characters.", str(path), row)
+        row = int(np.flatnonzero(table.isna().any(axis=1))[0])
+        name = table.columns[table.iloc[row].isna()][0]
+        found = records[row][slice(*columns[name])]
+        raise InputFileError(f"{name} is {found!r}, expected a number.", str(path), row + 1)
     table = table.sort_values("nu", kind="stable")
     molecule = int(table["molecule"].iloc[0])
     isotopologues = sorted({int(i) for i in table["isotopologue"]})
