@@ -1,14 +1,16 @@
 """Bayesian evidence of one model, from an ensemble chain and importance sampling with a frozen mixture.
 
-All of it works in probit space, where the prior is N(0, I): no hard edges, and a parameter that the data do not
-constrain is exactly Gaussian. The steps, each with its own seed:
+All of it works in probit space, where the prior is N(0, I): no hard edges, and a parameter that the data do
+not constrain is exactly Gaussian. The steps:
 
-1. a pool of prior draws, from which the walkers start at a raised temperature; a burn-in chain;
-2. local optima, one per stratum of a named coordinate, with their Gaussian approximations;
-3. a wide mixture of t distributions fitted to the chain, improved by rounds of weighted draws;
-4. a production chain whose moves include independent proposals from that mixture;
-5. a final mixture fitted to the first half of that chain and to the weighted draws, then frozen; fresh draws from
-   it give ln Z by importance sampling, and with the second half of the chain by bridge sampling as a check.
+1. an ensemble is cooled from the prior to the posterior, under a bias that keeps walkers in every stratum of a
+   named coordinate, and burnt in;
+2. local optima, one per stratum, give Gaussian approximations;
+3. a wide mixture of t distributions is fitted to the chain and improved by rounds of weighted draws, and the
+   heaviest draws of each round get a local approximation of their own;
+4. a production chain runs with proposals from that mixture;
+5. a final mixture is fitted to the first half of that chain and to the weighted draws, then frozen; fresh draws
+   from it give ln Z by importance sampling, and with the second half of the chain by bridge sampling as a check.
 
 No draw that helped to fit the final mixture enters an estimate: pooling the adaptation rounds, or bridging with
 the draws that were fitted, biases ln Z low.
@@ -45,8 +47,8 @@ _BATCH_ROWS = 512
 _POSTERIOR_DRAWS = 2000
 # Number of equal-probability strata of the stratum coordinate.
 _STRATA = 5
-# The umbrella lifts strata by up to e^4. Tried 0, 3 and 8: without it a thin region with a quarter of the mass was
-# lost unnoticed in three of three seeds; with 8 a small budget was spread too thinly.
+# The umbrella lifts strata by up to e^4. Tried 0, 3 and 8: without it a thin region with a quarter of the mass
+# was lost unnoticed in three of three seeds; with 8 a small budget was spread too thinly.
 _LN_UMBRELLA = 4.0
 # Temperatures between prior and posterior; a peak of ln L = 10 000 takes about 20.
 _MAX_STAGES = 40
@@ -125,7 +127,7 @@ class SamplerSettings:
 
     @classmethod
     def standard(cls) -> SamplerSettings:
-        """For results: at most about 35 000 likelihood calls per seed for D <= 4, 120 000 for D >= 10."""
+        """For results: up to 35 000 likelihood calls per seed for D <= 4, up to 120 000 for D >= 10."""
         return cls(
             few=Budget(1000, 10, 48, 60, 12, 8, 3, 1500, 120, 4000, 4, 0.015),
             many=Budget(2000, 12, 100, 120, 20, 8, 6, 4000, 150, 10000, 3, 0.04),
@@ -133,7 +135,7 @@ class SamplerSettings:
 
     @classmethod
     def quick(cls) -> SamplerSettings:
-        """For a first look: at most about 8 000 likelihood calls per seed for D <= 4, 20 000 for D >= 10."""
+        """For a first look: up to 8 000 likelihood calls per seed for D <= 4, about 20 000 for D >= 10."""
         return cls(
             few=Budget(500, 8, 24, 40, 6, 4, 2, 500, 40, 1200, 2, 0.05),
             many=Budget(1500, 12, 40, 75, 6, 0, 3, 1000, 40, 3000, 1, 0.1),
@@ -219,8 +221,8 @@ class CombinedEvidence:
     best_ln_likelihood : float
         ln L there.
     sampling : dict
-        `steps`, `walkers`, `autocorr_steps`, `ess` (the smallest), `likelihood_calls` (the sum), `flags` (list
-        of str), `converged` (bool).
+        `steps`, `walkers`, `autocorr_steps`, `ess` (the smallest), `likelihood_calls` (the sum), `flags`
+        (list of str), `converged` (bool).
     """
 
     ln_evidence: float
@@ -289,8 +291,8 @@ def estimate_evidence(
     starts_z : np.ndarray, optional
         Shape (K, D), further starts of local optimisations, e.g. the optimum of a nested model.
     chain_hook : callable, optional
-        Called as `chain_hook(stage, positions)` with stage "burn-in" and "production" and positions (S, W, D).
-        For figures and fault injection: an array that it returns replaces the positions.
+        Called as `chain_hook(stage, positions)` with stage "burn-in" and "production" and positions
+        (S, W, D). For figures and fault injection: an array that it returns replaces the positions.
 
     Returns
     -------
@@ -314,7 +316,7 @@ def estimate_evidence(
     chain = _produce(pool, wide, budget, seeds[2], rng, chain_hook)
     half = len(chain.positions) // 2
     frozen = _final_mixture(pool, chain.positions[:half], peaks, rng)
-    frozen, draws, ln_weights = _importance_draws(pool, frozen, peaks, chain.positions[:half], budget, rng)
+    draws, ln_weights = _importance_draws(target, frozen, budget, rng)
 
     ln_evidence, own_err, ess = importance_estimate(ln_weights)
     bridge, bridge_err = _bridge_with_chain(frozen, ln_weights, chain, half)
@@ -340,7 +342,7 @@ def estimate_evidence(
     return replace(run, flags=_run_flags(run, n_dim))
 
 
-# ---------------------------------------------------------------------------------------------------------------
+# ---------------------------------------------------------------------------------------------------------
 # Stage 1: exploration
 
 
@@ -429,7 +431,7 @@ class _Strata:
         return -np.maximum(self.ln_mass, self.ln_mass.max() - _LN_UMBRELLA)[self.index(z)]
 
     def shares(self, z: np.ndarray, ln_weights: np.ndarray) -> np.ndarray:
-        """Weights (N,) of points, scaled so that each stratum with points has the same total, up to the limit."""
+        """Weights (N,) of points, each stratum's scaled to the same total, up to the limit of the bias."""
         index = self.index(z)
         shares = np.zeros(len(z))
         for s in np.unique(index):
@@ -472,10 +474,10 @@ def _explore(
 ) -> tuple[np.ndarray, np.ndarray]:
     """Cool an ensemble from the prior to the posterior, then burn it in, all under the umbrella of the strata.
 
-    The power of the likelihood rises by steps that keep half of the walkers effective; each step resamples them
-    and runs a short chain, whose moves come from a mixture fitted to the step before (sequential Monte Carlo: Del
-    Moral, Doucet & Jasra 2006, J. R. Stat. Soc. B 68, 411). Walkers sent straight to power 1 would keep each
-    region in proportion to its basin, not to its mass.
+    The power of the likelihood rises by steps that keep half of the walkers effective; each step resamples
+    them and runs a short chain, whose moves come from a mixture fitted to the step before (sequential Monte
+    Carlo: Del Moral, Doucet & Jasra 2006, J. R. Stat. Soc. B 68, 411). Walkers sent straight to power 1 would
+    keep each region in proportion to its basin, not to its mass.
 
     Returns
     -------
@@ -488,7 +490,8 @@ def _explore(
     pool.add(standard_normal_mixture(target.n_dim), budget.pool, rng)
     if not np.any(np.isfinite(pool.ln_like)):
         raise EvidenceError(
-            f"The likelihood is zero at all {budget.pool} draws from the prior: check the priors and the model."
+            f"The likelihood is zero at all {budget.pool} draws from the prior: "
+            "check the priors and the model."
         )
     points, ln_like, power, goal = pool.draws, pool.ln_like, 0.0, min(budget.walkers, budget.pool // 4)
     guide = None
@@ -618,7 +621,7 @@ def _hooked(
     return replaced, ln_prob.reshape(replaced.shape[:2])
 
 
-# ---------------------------------------------------------------------------------------------------------------
+# ---------------------------------------------------------------------------------------------------------
 # Stage 2: local optima
 
 
@@ -803,7 +806,7 @@ def _peak_mixture(tops: np.ndarray, ln_tops: np.ndarray, covariances: np.ndarray
     return Mixture(weights[kept], tops[kept], covariances[kept], np.full(int(kept.sum()), 5.0))
 
 
-# ---------------------------------------------------------------------------------------------------------------
+# ---------------------------------------------------------------------------------------------------------
 # Stage 3: adaptation
 
 
@@ -817,8 +820,8 @@ def _adapt(
 ) -> tuple[Mixture, Mixture | None]:
     """Population Monte Carlo (Cappe et al. 2008): refit the proposal to weighted draws, and draw again.
 
-    The pool keeps the draws; the last proposal and the local approximations are returned. Weights are truncated
-    for the fits.
+    The pool keeps the draws; the last proposal and the local approximations are returned. Weights are
+    truncated for the fits.
     """
     # Walkers stuck far below the rest would only waste components.
     near = np.flatnonzero(ln_explored > ln_explored.max() - 3 * pool.target.n_dim - 10)
@@ -872,7 +875,7 @@ def _local_scale(draws: np.ndarray) -> np.ndarray:
 
 
 def _fit_set(pool: _Pool, chain_draws: np.ndarray, rng: np.random.Generator) -> tuple[np.ndarray, np.ndarray]:
-    """Draws (N, D) and shares (N,) for a fit: a chain, and the pool with as much say as its effective size."""
+    """Draws (N, D) and shares (N,) for a fit: a chain, and the pool with the say of its effective size."""
     weights = _relative(truncate(pool.ln_weights()))
     trust = min(effective_size(weights) * CHAIN_THIN, float(_FIT_DRAWS))
     # Thinned in proportion to the root of the weight: light draws still mark the flanks, heavy ones are not lost.
@@ -898,7 +901,7 @@ def truncate(ln_weights: np.ndarray) -> np.ndarray:
     return np.minimum(ln_weights, limit)
 
 
-# ---------------------------------------------------------------------------------------------------------------
+# ---------------------------------------------------------------------------------------------------------
 # Stages 4 and 5: production chain, frozen mixture, estimates
 
 
@@ -934,35 +937,18 @@ def _final_mixture(
 
 
 def _importance_draws(
-    pool: _Pool,
-    frozen: Mixture,
-    peaks: Mixture | None,
-    first_half: np.ndarray,
-    budget: Budget,
-    rng: np.random.Generator,
-) -> tuple[Mixture, np.ndarray, np.ndarray]:
-    """The frozen mixture, draws (N, D) from it and their log weights (N,), in batches until the error is reached.
-
-    A first batch that could not reach the smallest effective size even with the remaining ones is given up as one
-    more adaptation round, and the mixture is frozen afresh.
-    """
+    target: _Target, frozen: Mixture, budget: Budget, rng: np.random.Generator
+) -> tuple[np.ndarray, np.ndarray]:
+    """Draws (N, D) from the frozen mixture and log weights (N,), in batches until the error is reached."""
     draws, ln_weights = [], []
-    for number in range(budget.final_batches):
-        fresh = pool.add(frozen, budget.final_draws, rng)
-        own = importance_estimate(fresh)
-        hopeless = own[2] * budget.final_batches < MIN_EFFECTIVE_SIZE
-        if number == 0 and budget.final_batches > 1 and hopeless:
-            if budget.outliers:
-                found = _cover_outliers(pool, _local_scale(first_half.reshape(-1, frozen.n_dim)), budget.outliers)
-                peaks = found if peaks is None else combine_mixtures([(1.0, peaks), (1.0, found)])
-            frozen = _final_mixture(pool, first_half, peaks, rng)
-            continue
-        draws.append(pool.draws[-budget.final_draws :])
-        ln_weights.append(fresh)
+    for _ in range(budget.final_batches):
+        batch = frozen.draw(budget.final_draws, rng)
+        draws.append(batch)
+        ln_weights.append(target.ln_posterior(batch) - frozen.ln_density(batch))
         _, own_err, ess = importance_estimate(np.concatenate(ln_weights))
         if own_err <= budget.target_err and ess >= MIN_EFFECTIVE_SIZE:
             break
-    return frozen, np.concatenate(draws), np.concatenate(ln_weights)
+    return np.concatenate(draws), np.concatenate(ln_weights)
 
 
 def importance_estimate(ln_weights: np.ndarray) -> tuple[float, float, float]:
@@ -1008,8 +994,8 @@ def bridge_estimate(ln_ratio_proposal: np.ndarray, ln_ratio_chain: np.ndarray) -
 
     Notes
     -----
-    Meng & Wong 1996, Stat. Sinica 6, 831, eq. 4.1, iterated with s = 1/2; error: Fruehwirth-Schnatter 2004, Econom. J. 7, 143,
-    eq. 16.
+    Meng & Wong 1996, Stat. Sinica 6, 831, eq. 4.1, iterated with s = 1/2; error: Fruehwirth-Schnatter 2004,
+    Econom. J. 7, 143.
     """
     n_proposal, n_chain = ln_ratio_proposal.size, ln_ratio_chain.size
     # Equal say for both sets. Weights by size would be a little more precise, but where the proposal draws
@@ -1034,14 +1020,14 @@ def bridge_estimate(ln_ratio_proposal: np.ndarray, ln_ratio_chain: np.ndarray) -
 def _bridge_with_chain(
     frozen: Mixture, ln_weights: np.ndarray, chain: sampling.EnsembleChain, half: int
 ) -> tuple[float, float]:
-    """Bridge between the frozen mixture and the second half of the chain, a gap left out between the halves."""
+    """Bridge between the frozen mixture and the second half of the chain, with a gap between the halves."""
     gap = max(1, (len(chain.positions) - half) // 10)
     later = chain.positions[half + gap :]
     ln_q = frozen.ln_density(later.reshape(-1, frozen.n_dim)).reshape(later.shape[:2])
     return bridge_estimate(ln_weights, chain.ln_prob[half + gap :] - ln_q)
 
 
-# ---------------------------------------------------------------------------------------------------------------
+# ---------------------------------------------------------------------------------------------------------
 # Judgement
 
 
@@ -1089,9 +1075,9 @@ def combine_runs(runs: Sequence[EvidenceRun], n_dim: int) -> CombinedEvidence:
     Returns
     -------
     CombinedEvidence
-        ln Z is the mean with weights 1/(own error^2 + floor^2): of two good runs almost the plain mean, while a
-        run with exploded weights hardly counts. Its error is the largest of the combined own errors, half the
-        range of the seeds and the floor (`error_floor`), which stays because seeds share their blind spots.
+        ln Z is the mean with weights 1/(own error^2 + floor^2): of two good runs almost the plain mean, while
+        a run with exploded weights hardly counts. Its error is the largest of the combined own errors, half
+        the range of the seeds and the floor (`error_floor`), which stays as seeds share their blind spots.
 
     Raises
     ------

@@ -141,8 +141,9 @@ class Mixture:
 
         Notes
         -----
-        The number of points of each component is drawn by systematic sampling (Kitagawa 1996): its expectation
-        is N times the weight, so averages stay unbiased, and the variance is below that of independent draws.
+        The number of points of each component is drawn by systematic sampling (Kitagawa 1996, J. Comput. Graph.
+        Stat. 5, 1): its expectation is N times the weight, so averages stay unbiased, and the variance is below
+        that of independent draws.
         """
         members = systematic_resample(self.weights, n_draws, rng)
         points = rng.standard_normal((n_draws, self.n_dim))
@@ -204,9 +205,9 @@ class Mixture:
         drawn[:, block] = self.means[:, block][member] + offset + noise
         return drawn
 
-    def widened(self, factor: float, dof: float | None = None) -> Mixture:
-        """Copy with every scale matrix multiplied by `factor` and, if given, other degrees of freedom."""
-        return Mixture(self.weights, self.means, self.scales * factor, self.dof if dof is None else dof)
+    def widened(self, factor: float) -> Mixture:
+        """Copy with every scale matrix multiplied by `factor`."""
+        return Mixture(self.weights, self.means, self.scales * factor, self.dof)
 
 
 def _ln_sum_columns(terms: np.ndarray) -> np.ndarray:
@@ -226,7 +227,7 @@ def combine_mixtures(parts: list[tuple[float, Mixture]]) -> Mixture:
     Parameters
     ----------
     parts : list of (float, Mixture)
-        Shares (scaled to sum to one) and mixtures of the same dimension; a share of zero leaves its mixture out.
+        Shares (scaled to sum to one) and mixtures of one dimension; a share of zero leaves its mixture out.
 
     Returns
     -------
@@ -291,21 +292,21 @@ def fit_mixture(
     max_iterations : int, optional
         Upper limit of iterations.
     tolerance : float, optional
-        Stop when the mean log density per draw rises by less than this in one iteration. A proposal gains nothing
-        from more: a gain of 0.002 changes the effective size by about as many parts in a thousand.
+        Stop when the mean log density per draw rises by less than this in one iteration. A proposal gains
+        nothing from more: 0.002 changes the effective size by about as many parts in a thousand.
 
     Returns
     -------
     mixture : Mixture
         The fit.
     mean_ln_density : float
-        Weighted mean of the log density of the draws under the last mixture but one iteration.
+        Weighted mean of the log density of the draws, at the start of the last iteration.
 
     Notes
     -----
-    EM for t mixtures: Peel & McLachlan 2000, Stat. Comput. 10, 339. Each scale matrix is drawn towards the mean
-    one within components with the strength of (D + 2)/2 draws, as a conjugate prior would (the idea of Fraley &
-    Raftery 2007, J. Classif. 24, 155): a component that owns few draws cannot collapse onto them.
+    EM for t mixtures: Peel & McLachlan 2000, Stat. Comput. 10, 339. Each scale matrix is drawn towards the
+    mean one within components with the strength of (D + 2)/2 draws, as a conjugate prior would (the idea of
+    Fraley & Raftery 2007, J. Classif. 24, 155): a component that owns few draws cannot collapse onto them.
     """
     n_dim = draws.shape[1]
     share = weights / weights.sum()

@@ -36,8 +36,8 @@ class EnsembleChain:
 def child_sequence(parent: np.random.SeedSequence, *path: int) -> np.random.SeedSequence:
     """Child of a seed sequence at a fixed place of its tree.
 
-    Unlike `parent.spawn`, which counts its calls, this gives the same child each time, so that using one parent
-    twice repeats the numbers.
+    Unlike `parent.spawn`, which counts its calls, this gives the same child each time, so that using one
+    parent twice repeats the numbers.
     """
     return np.random.SeedSequence(
         parent.entropy, spawn_key=(*parent.spawn_key, *path), pool_size=parent.pool_size
@@ -66,9 +66,9 @@ def guided_moves(
     Returns
     -------
     list of (Move, float)
-        Block moves 0.45, independence 0.25, differential evolution 0.2 (ter Braak 2006), stretch 0.1 (Goodman &
-        Weare 2010): on retrieval-like targets the first two jump three to ten times further per call, and the
-        last two work where the guide is poor.
+        Block moves 0.45, independence 0.25, differential evolution 0.2 (ter Braak 2006), stretch 0.1 (Goodman
+        & Weare 2010): on retrieval-like targets the first two jump three to ten times further per call, and
+        the last two work where the guide is poor.
 
     Notes
     -----
@@ -154,19 +154,20 @@ def autocorrelation_steps(series: np.ndarray) -> float:
     Returns
     -------
     float
-        At least 1. Biased low when the chain is shorter than about 50 times the result; `inf` when a walker or
-        the whole ensemble never moved.
+        At least 1. Biased low when the chain is shorter than about 50 times the result; walkers that never
+        moved are left out, and `inf` tells that hardly any did.
 
     Notes
     -----
     Sokal's windowed estimate averaged over the walkers (Goodman & Weare 2010), as in emcee.
     """
     series = series[:, :, None] if series.ndim == 2 else series
+    spread = np.ptp(series, axis=0)
     # A constant walker has no autocorrelation function: it would turn the average into 0/0.
-    if len(series) < 2 or np.any(np.ptp(series, axis=0) == 0):
-        moving = np.all(np.ptp(series, axis=0) > 0, axis=1) if len(series) > 1 else np.zeros(1, dtype=bool)
-        if moving.sum() < 2:
-            return np.inf
-        series = series[:, moving]
+    moving = np.all(spread > 0, axis=1)
+    if moving.sum() < 2:
+        return np.inf
+    # The function of each walker is normalised anyway; unit spread keeps its square from underflow.
+    series = (series[:, moving] - series[0, moving]) / spread[moving]
     times = emcee.autocorr.integrated_time(series, tol=0, quiet=True)
     return float(max(1.0, np.max(times)))

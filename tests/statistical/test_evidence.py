@@ -40,7 +40,9 @@ def both_seeds(ln_likelihood, n_dim, settings=STANDARD, **options):
 
 def assert_agrees(combined, expected, expected_err=0.0):
     assert combined.sampling["converged"], combined.sampling["flags"]
-    assert combined.ln_evidence == pytest.approx(expected, abs=3 * np.hypot(combined.ln_evidence_err, expected_err))
+    assert combined.ln_evidence == pytest.approx(
+        expected, abs=3 * np.hypot(combined.ln_evidence_err, expected_err)
+    )
 
 
 # ---------------------------------------------------------------------------------------------------------
@@ -64,7 +66,9 @@ def linear_model(n_dim, seed):
     matrix = rng.standard_normal((3 * n_dim, n_dim)) @ np.diag(np.geomspace(100.0, 0.1, n_dim))
     data = matrix @ rng.standard_normal(n_dim) + rng.standard_normal(3 * n_dim)
     spread = np.eye(3 * n_dim) + matrix @ matrix.T
-    expected = -0.5 * (data @ np.linalg.solve(spread, data) + np.linalg.slogdet(spread)[1] + len(data) * LN_2PI)
+    expected = -0.5 * (
+        data @ np.linalg.solve(spread, data) + np.linalg.slogdet(spread)[1] + len(data) * LN_2PI
+    )
 
     def ln_likelihood(z):
         residual = data - z @ matrix.T
@@ -95,7 +99,9 @@ def two_modes(widths):
 
     def ln_likelihood(z):
         distance2 = ((z[:, None, :] - centres) ** 2).sum(axis=2)
-        return logsumexp(np.log(weights) - 0.5 * distance2 / widths**2 - 4 * np.log(widths) - 2 * LN_2PI, axis=1)
+        return logsumexp(
+            np.log(weights) - 0.5 * distance2 / widths**2 - 4 * np.log(widths) - 2 * LN_2PI, axis=1
+        )
 
     total = 1 + widths**2
     ln_mass = np.log(weights) - 0.5 * (centres**2).sum(axis=1) / total - 2 * (LN_2PI + np.log(total))
@@ -126,7 +132,9 @@ def test_two_modes(widths, options):
 def by_quadrature(ln_likelihood, n_nodes):
     """ln Z in probit space by Gauss-Legendre quadrature in u = Phi(z), `n_nodes` for each dimension."""
     nodes = [np.polynomial.legendre.leggauss(n) for n in n_nodes]
-    grid = np.stack(np.meshgrid(*[(x + 1) / 2 for x, _ in nodes], indexing="ij"), axis=-1).reshape(-1, len(nodes))
+    grid = np.stack(np.meshgrid(*[(x + 1) / 2 for x, _ in nodes], indexing="ij"), axis=-1).reshape(
+        -1, len(nodes)
+    )
     weight = np.stack(np.meshgrid(*[w / 2 for _, w in nodes], indexing="ij"), axis=-1)
     return logsumexp(ln_likelihood(ndtri(grid)), b=weight.reshape(-1, len(nodes)).prod(axis=1))
 
@@ -345,7 +353,9 @@ def test_exploration_lost_far_away_is_flagged():
 
 def test_too_hard_for_the_budget_is_flagged():
     """A shell has no mixture of a few components in eight dimensions."""
-    small = dataclasses.replace(SamplerSettings.quick().budget(8), rounds=1, production_steps=20, burn_steps=10)
+    small = dataclasses.replace(
+        SamplerSettings.quick().budget(8), rounds=1, production_steps=20, burn_steps=10
+    )
 
     def ln_likelihood(z):
         return -0.5 * ((np.sqrt((z**2).sum(axis=1)) - 2.0) / 0.002) ** 2
@@ -408,7 +418,9 @@ def test_combination_of_disagreeing_runs(good_run):
 
 
 def test_exploded_run_hardly_counts(good_run):
-    exploded = dataclasses.replace(good_run, ln_evidence=good_run.ln_evidence + 2.0, ln_evidence_err=0.9, ess=1.2)
+    exploded = dataclasses.replace(
+        good_run, ln_evidence=good_run.ln_evidence + 2.0, ln_evidence_err=0.9, ess=1.2
+    )
     combined = combine_runs([good_run, exploded], 3)
     assert combined.ln_evidence == pytest.approx(good_run.ln_evidence, abs=0.02)
     assert combined.ln_evidence_err == pytest.approx(1.0)
@@ -497,6 +509,11 @@ def test_climb_and_curvature_of_a_gaussian():
 def test_climb_respects_its_limits():
     limit = np.array([[0.2, np.inf]])
     tops, _ = climb(
-        lambda z: -0.5 * ((z - 1.0) ** 2).sum(axis=1), np.zeros((1, 2)), np.eye(2), -np.full((1, 2), np.inf), limit, 30
+        lambda z: -0.5 * ((z - 1.0) ** 2).sum(axis=1),
+        np.zeros((1, 2)),
+        np.eye(2),
+        -np.full((1, 2), np.inf),
+        limit,
+        30,
     )
     np.testing.assert_allclose(tops, [[0.2, 1.0]], atol=0.02)

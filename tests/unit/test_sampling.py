@@ -104,5 +104,8 @@ def test_autocorrelation_with_stuck_walkers():
     series = rng.standard_normal((500, 10))
     series[:, 0] = 1.0
     assert sampling.autocorrelation_steps(series) < 1.5
+    assert sampling.autocorrelation_steps(series * 1e-250) == pytest.approx(
+        sampling.autocorrelation_steps(series)
+    )
     assert sampling.autocorrelation_steps(np.ones((500, 10))) == np.inf
     assert sampling.autocorrelation_steps(np.ones((1, 10))) == np.inf
