@@ -13,8 +13,9 @@ from transit.opacity import OpacityTable, available, load_table
 from transit.records import DepthSpectrum, Priors, System
 
 MOST_DEFAULT_SPECIES = 6
-# A table serves a planet when it is trusted over at least this share of the prior range of temperature.
-LEAST_TRUSTED_SHARE = 0.5
+# A table serves a planet when it is trusted over at least this share of the prior range of temperature; the prior is
+# then clipped to it.
+LEAST_TRUSTED_SHARE = 1 / 3
 
 
 @dataclass(frozen=True)
@@ -49,12 +50,12 @@ def prior_temperature_k(system: System, priors: Priors) -> tuple[float, float]:
 def bins_in_trusted_bands(
     spectrum: DepthSpectrum, table: OpacityTable, temperature_range_k: tuple[float, float]
 ) -> tuple[np.ndarray, list[dict]]:
-    """Which bins lie inside known bands of a species where its table is trusted over most temperatures.
+    """Which bins lie inside known bands of a species where its table is trusted over a good part of the temperatures.
 
     Returns
     -------
     (ndarray of bool, shape (N,), list of dict)
-        And the trusted ranges that hold over at least half of the temperature range.
+        And the trusted ranges that hold over a good part of the temperature range.
     """
     low_k, high_k = temperature_range_k
     usable = [
@@ -149,7 +150,7 @@ def _why_untested(name: str, table: OpacityTable, wanted: tuple[float, float]) -
         f"{r['low_um']:g}-{r['high_um']:g} um at {r['t_min_k']:g}-{r['t_max_k']:g} K" for r in table.trusted
     )
     return (
-        f"{name}: no bin lies inside one of its bands where its table is trusted over most of "
+        f"{name}: no bin lies inside one of its bands where its table is trusted over a third of "
         f"{wanted[0]:.0f}-{wanted[1]:.0f} K (trusted: {ranges})."
     )
 

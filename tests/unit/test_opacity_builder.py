@@ -105,7 +105,7 @@ def test_hitran_non_number_is_refused(records, sums, tmp_path):
     """Text in a number's column is refused."""
     path = tmp_path / "01.par"
     path.write_text("\n".join([records[0][:15] + " 1.2x4E-21" + records[0][25:], *records[1:]]) + "\n")
-    with pytest.raises(InputFileError, match=r"01\.par.*could not be read"):
+    with pytest.raises(InputFileError, match=r"01\.par.*expected a number"):
         read_hitran(path, sums)
 
 

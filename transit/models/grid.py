@@ -14,6 +14,7 @@ SLICES = 16
 # A bin of the spectrum is one cell as long as it holds no more bands than this (a resolving power of 50);
 # wider bins are cut into several cells, because bands of different species lie at different places inside them.
 BANDS_PER_CELL = 8.0
+ORDER_CANDIDATES = 50
 
 
 @dataclass(frozen=True, eq=False)
@@ -135,25 +136,32 @@ def cell_slices(ln_values: np.ndarray, weights: np.ndarray) -> np.ndarray:
 def slice_orders(n_species: int, cell_key: int) -> np.ndarray:
     """Orders in which the slices of each species are put before they are added, for one cell.
 
-    Lines of different species do not line up, so slices must not be added rank by rank. The orders are the strata
-    of a scrambled Sobol sequence: each species meets every slice once, and pairs of species are spread evenly.
+    Lines of different species do not line up, so slices must not be added rank by rank; but with few slices a
+    random order can be correlated by chance. Each order is the best of a few random ones: least correlated, in
+    rank and in distance from the middle rank, with the orders before it. (Strata of a scrambled Sobol sequence
+    spread pairs better but leave some pairs of four or more species in step: heights 0.3 H too low.)
 
     Parameters
     ----------
     n_species : int
     cell_key : int
-        Fixes the scrambling: the same cell gets the same orders in every run.
+        Fixes the random stream: the same cell gets the same orders in every run.
 
     Returns
     -------
     ndarray of int, shape (n_species, SLICES)
     """
-    from scipy.stats import qmc  # a slow import, and needed only here
-
-    points = qmc.Sobol(max(n_species, 1), scramble=True, rng=np.random.default_rng([20, cell_key])).random(
-        SLICES
-    )
-    return np.floor(points.T * SLICES).astype(int)[:n_species]
+    rng = np.random.default_rng([20, cell_key])
+    rank = np.arange(SLICES) - (SLICES - 1) / 2
+    fold = np.abs(rank) - np.abs(rank).mean()
+    orders = [rng.permutation(SLICES)]
+    for _ in range(1, n_species):
+        candidates = np.array([rng.permutation(SLICES) for _ in range(ORDER_CANDIDATES)])
+        before = np.array(orders)
+        linear = np.abs(rank[candidates] @ rank[before].T) / (rank @ rank)
+        folded = np.abs(fold[candidates] @ fold[before].T) / (fold @ fold)
+        orders.append(candidates[np.argmin((linear + folded / 2).max(axis=1))])
+    return np.array(orders)
 
 
 def cell_key(bands: np.ndarray) -> int:

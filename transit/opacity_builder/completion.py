@@ -52,8 +52,8 @@ def missing_mean_cm2(lines: LineList, band_means: BandMeans, temperature_k: floa
     cool_k = float(band_means.temperature_k[0])
     scale = np.clip(summed(cool_k) / measured(cool_k), *RESCALING_LIMITS)
     want = scale * measured(temperature_k)
-    missing = want - summed(temperature_k)
-    return np.where(missing > LEAST_MISSING_SHARE * want, missing, 0.0)
+    # Subtracted rather than cut off at, so that the completion sets in smoothly as the gas gets hotter.
+    return np.maximum((1 - LEAST_MISSING_SHARE) * want - summed(temperature_k), 0.0)
 
 
 def completed(

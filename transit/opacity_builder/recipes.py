@@ -325,9 +325,9 @@ def carbon_dioxide_at(source: Path, temperature_k: float) -> tuple[np.ndarray, n
 
 
 CO2_HEADER = {
-    "trusted": [{"low_um": 1.21, "high_um": 20.0, "t_min_k": 200, "t_max_k": 2500,
+    "trusted": [{"low_um": 1.21, "high_um": 20.0, "t_min_k": 250, "t_max_k": 2500,
                  "error": "band means 5 per cent; mean ln k of bands without lines uncertain by about 0.5; "
-                 "below 300 K continued, with an error (rms of ln k) of 0.1 at 250 K and 0.4 at 200 K"}],
+                 "below 300 K continued, with an error (rms of ln k) of 0.1-0.2 at 250 K"}],
     "bands_um": [[1.42, 1.45], [1.57, 1.62], [1.94, 2.09], [2.67, 2.84], [4.15, 4.50], [13.5, 17.0]],
     "method": "hot band means of 25 cm-1 with Malkmus fine structure of calibrated effective width; summed lines, "
     "completed to the band means, at 2028-2276, 3580-3600, 4028-5022 and 6028-6472 cm-1; below 300 K the band means "
@@ -399,12 +399,12 @@ def methane_at(source: Path, temperature_k: float) -> tuple[np.ndarray, np.ndarr
 
 CH4_HEADER = {
     "trusted": [
-        {"low_um": 2.5, "high_um": 20.0, "t_min_k": 200, "t_max_k": 1400,
+        {"low_um": 2.5, "high_um": 20.0, "t_min_k": 250, "t_max_k": 1400,
          "error": "band means 10 per cent; mean ln k of bands without lines uncertain by about 0.5; "
-         "below 300 K continued, with an error (rms of ln k) of 0.1 at 250 K and 0.4 at 200 K"},
-        {"low_um": 1.63, "high_um": 2.5, "t_min_k": 200, "t_max_k": 600,
+         "below 300 K continued, with an error (rms of ln k) of 0.1-0.2 at 250 K"},
+        {"low_um": 1.63, "high_um": 2.5, "t_min_k": 250, "t_max_k": 600,
          "error": "hot bands missing above 600 K, where the table is too weak"},
-        {"low_um": 1.08, "high_um": 1.63, "t_min_k": 200, "t_max_k": 400,
+        {"low_um": 1.08, "high_um": 1.63, "t_min_k": 250, "t_max_k": 400,
          "error": "15 per cent at 250-400 K, no temperature dependence"},
         {"low_um": 0.5, "high_um": 0.999, "t_min_k": 150, "t_max_k": 300,
          "error": "band means of cold giant planets, no temperature dependence"},
