@@ -32,6 +32,7 @@ Progress = Callable[[int, int, str], None]
 POOR_FIT_P = (
     0.001  # below this the best hypothesis does not fit, and all are fitted again with inflated errors
 )
+RERUN_ROUNDS = 2  # how often fits that have not converged are made again
 MODEL_DRAWS = 300
 FINE_RESOLVING_POWER = 120
 FEWEST_BINS = 3
@@ -168,6 +169,30 @@ def _best(fits: tuple[Fit, ...]) -> Fit:
 
 def _fit_all(problem, hypotheses, seed, n_runs, settings, inflate, executor, progress) -> tuple[Fit, ...]:
     """Fits of the nulls and of every sampled hypothesis, in a fixed order."""
+    runs = _first_runs(problem, hypotheses, seed, n_runs, settings, inflate, executor, progress)
+    spent = {name: sum(run.likelihood_calls for run in own) for name, own in runs.items()}
+    reruns = dict.fromkeys(runs, 0)
+    for round_number in range(1, RERUN_ROUNDS + 1):
+        tasks = _reruns(problem, hypotheses, runs, seed, round_number * n_runs, settings, inflate)
+        if not tasks:
+            break
+        for task, run in _run_with_progress(tasks, executor, progress, inflate, "again "):
+            name = task.hypothesis.name
+            runs[name][task.run % n_runs] = run
+            spent[name] += run.likelihood_calls
+            reruns[name] += 1
+    fits = [_linear_fit(problem, name, seed, inflate) for name in ("flat", "slope")]
+    for hypothesis in hypotheses:
+        n_dim = len(problem.parameters(hypothesis, inflate))
+        combined = combine_runs(runs[hypothesis.name], n_dim)
+        combined.sampling["likelihood_calls"] = spent[hypothesis.name]
+        combined.sampling["reruns"] = reruns[hypothesis.name]
+        fits.append(_sampled_fit(problem, hypothesis, combined, seed, inflate))
+    return tuple(fits)
+
+
+def _first_runs(problem, hypotheses, seed, n_runs, settings, inflate, executor, progress) -> dict[str, list]:
+    """Runs of every hypothesis with every independent seed, by name."""
     # The largest models first: they take longest, so the processes finish together.
     tasks = sorted(
         (
@@ -177,18 +202,40 @@ def _fit_all(problem, hypotheses, seed, n_runs, settings, inflate, executor, pro
         ),
         key=lambda task: -len(task.hypothesis.species),
     )
-    runs = {}
-    for done, (task, run) in enumerate(_run(tasks, executor), start=1):
-        runs[task.hypothesis.name, task.run] = run
-        if progress is not None:
-            label = task.hypothesis.name + (", inflated errors" if inflate else "")
-            progress(done, len(tasks), label)
-    fits = [_linear_fit(problem, name, seed, inflate) for name in ("flat", "slope")]
+    runs = {hypothesis.name: [None] * n_runs for hypothesis in hypotheses}
+    for task, run in _run_with_progress(tasks, executor, progress, inflate):
+        runs[task.hypothesis.name][task.run] = run
+    return runs
+
+
+def _reruns(problem, hypotheses, runs, seed, first_run, settings, inflate) -> list[FitTask]:
+    """Tasks for the runs of hypotheses that have not converged: fresh draws, knowing the best points of all runs.
+
+    A run with a flag is made again; where only the seeds disagree, the one with less evidence is, because a run
+    that misses a region finds too little. The new run takes the place of the old one, whatever it finds.
+    """
+    tasks = []
     for hypothesis in hypotheses:
-        n_dim = len(problem.parameters(hypothesis, inflate))
-        combined = combine_runs([runs[hypothesis.name, run] for run in range(n_runs)], n_dim)
-        fits.append(_sampled_fit(problem, hypothesis, combined, seed, inflate))
-    return tuple(fits)
+        own = runs[hypothesis.name]
+        if combine_runs(own, len(problem.parameters(hypothesis, inflate))).sampling["converged"]:
+            continue
+        doubtful = [k for k, run in enumerate(own) if run.flags]
+        if not doubtful:
+            doubtful = [int(np.argmin([run.ln_evidence for run in own]))]
+        starts = np.stack([run.best_z for run in own])
+        tasks += [
+            FitTask(problem, hypothesis, seed, first_run + k, settings, inflate, starts) for k in doubtful
+        ]
+    return tasks
+
+
+def _run_with_progress(tasks, executor, progress, inflate, prefix=""):
+    """Pairs of task and run as they come, telling how far things are."""
+    for done, (task, run) in enumerate(_run(tasks, executor), start=1):
+        if progress is not None:
+            label = prefix + task.hypothesis.name + (", inflated errors" if inflate else "")
+            progress(done, len(tasks), label)
+        yield task, run
 
 
 def _run(tasks, executor):

@@ -112,7 +112,11 @@ class Problem:
 
 @dataclass(frozen=True, eq=False)
 class FitTask:
-    """One fit of one hypothesis with one of the independent seeds."""
+    """One fit of one hypothesis with one of the independent seeds.
+
+    `starts_z` are places, shape (K, D), from which the local optimisation starts besides its own: the best points
+    of other runs of the same hypothesis.
+    """
 
     problem: Problem
     hypothesis: Hypothesis
@@ -120,6 +124,7 @@ class FitTask:
     run: int
     settings: SamplerSettings
     inflate: bool = False
+    starts_z: np.ndarray | None = None
 
 
 _prepared: dict[str, Problem] = {}
@@ -147,7 +152,8 @@ def _share_model(problem: Problem) -> Problem:
 def run_fit(task: FitTask) -> EvidenceRun:
     """Fit one hypothesis: a pure function of the task, fit for any executor.
 
-    The random stream depends on the seed, the name of the hypothesis and the number of the run only.
+    The random stream depends on the seed, the name of the hypothesis and the number of the run only, so that results
+    do not depend on what else is fitted, or where.
     """
     problem = _share_model(task.problem)
     stream = np.random.SeedSequence([task.seed, zlib.crc32(task.hypothesis.name.encode()), task.run])
@@ -157,6 +163,7 @@ def run_fit(task: FitTask) -> EvidenceRun:
         stream,
         task.settings,
         stratum_dim=DECK_COORDINATE,
+        starts_z=task.starts_z,
     )
 
 

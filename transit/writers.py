@@ -223,6 +223,7 @@ def _hypothesis(fit: Fit, grown: Fit | None) -> dict:
             "ln_evidence": grown.ln_evidence,
             "ln_evidence_err": grown.ln_evidence_err,
             "error_factor": {"median": factor.median, "lower": factor.lower, "upper": factor.upper},
+            "sampling": grown.sampling,
         }
     return entry
 
