@@ -16,6 +16,8 @@ MOST_DEFAULT_SPECIES = 6
 # A table serves a planet when it is trusted over at least this share of the prior range of temperature; the prior is
 # then clipped to it.
 LEAST_TRUSTED_SHARE = 1 / 3
+FEWEST_DEFAULT_BINS = 2
+COLDEST_TABLES_K, HOTTEST_TABLES_K = 150.0, 2500.0
 
 
 @dataclass(frozen=True)
@@ -55,7 +57,7 @@ def bins_in_trusted_bands(
     Returns
     -------
     (ndarray of bool, shape (N,), list of dict)
-        And the trusted ranges that hold over a good part of the temperature range.
+        And the trusted ranges that hold over a good part of the temperatures and have such bins.
     """
     low_k, high_k = temperature_range_k
     usable = [
@@ -64,15 +66,20 @@ def bins_in_trusted_bands(
         if min(high_k, r["t_max_k"]) - max(low_k, r["t_min_k"]) >= LEAST_TRUSTED_SHARE * (high_k - low_k)
     ]
     inside = np.zeros(spectrum.n_bins, bool)
+    used = []
     low_bin = spectrum.wavelength_um - spectrum.half_width_um
     high_bin = spectrum.wavelength_um + spectrum.half_width_um
-    for low, high in table.bands_um:
-        for trusted in usable:
+    for trusted in usable:
+        hit = np.zeros_like(inside)
+        for low, high in table.bands_um:
             start, stop = max(low, trusted["low_um"]), min(high, trusted["high_um"])
-            inside |= (spectrum.wavelength_um >= start) & (spectrum.wavelength_um <= stop)
+            hit |= (spectrum.wavelength_um >= start) & (spectrum.wavelength_um <= stop)
             # A bin wider than the band holds it even when its centre lies outside.
-            inside |= (low_bin <= start) & (high_bin >= stop) & (start < stop)
-    return inside, usable
+            hit |= (low_bin <= start) & (high_bin >= stop) & (start < stop)
+        if hit.any():
+            used.append(trusted)
+        inside |= hit
+    return inside, used
 
 
 def select_species(
@@ -85,8 +92,8 @@ def select_species(
     spectrum : DepthSpectrum
     system : System
     requested : tuple of str or None
-        None: at most six species with trusted bands inside the spectrum at the planet's temperature, those with
-        most bins in their bands first.
+        None: at most six species with at least two bins in bands that are trusted at the equilibrium temperature,
+        those with most bins first.
     tables : Path, optional
 
     Returns
@@ -118,6 +125,8 @@ def select_species(
             found[name] = (count, table, usable)
         elif requested is not None:
             untested[name] = _why_untested(name, table, wanted)
+    if requested is None:
+        found = {name: entry for name, entry in found.items() if _by_default(*entry, system)}
     ranked = sorted(found, key=lambda name: -found[name][0])
     chosen = ranked if requested is not None else ranked[:MOST_DEFAULT_SPECIES]
     species = tuple(name for name in names if name in chosen)
@@ -145,6 +154,16 @@ def select_species(
     return Selection(species, reasons, untested, (low, high), coverage, notes)
 
 
+def _by_default(count: int, table: OpacityTable, usable: list[dict], system: System) -> bool:
+    """Whether a species is fitted without being asked for: enough bins, trusted at the equilibrium temperature.
+
+    Otherwise a species of one doubtful bin would narrow the temperature prior of all hypotheses.
+    """
+    temperature_k = min(system.equilibrium_temperature_k, HOTTEST_TABLES_K)
+    trusted = any(r["t_min_k"] <= temperature_k <= r["t_max_k"] for r in usable)
+    return trusted and count >= FEWEST_DEFAULT_BINS
+
+
 def _why_untested(name: str, table: OpacityTable, wanted: tuple[float, float]) -> str:
     ranges = "; ".join(
         f"{r['low_um']:g}-{r['high_um']:g} um at {r['t_min_k']:g}-{r['t_max_k']:g} K" for r in table.trusted
@@ -158,7 +177,8 @@ def _why_untested(name: str, table: OpacityTable, wanted: tuple[float, float]) -
 def _clip_temperature(wanted, usable_by_species, tables):
     """Common range of temperature of all hypotheses: the prior, clipped to what the tables serve."""
     low, high = wanted
-    floor, ceiling, who_low, who_high = 150.0, 2500.0, "the continuum", "the continuum"
+    floor, who_low = COLDEST_TABLES_K, "the continuum"
+    ceiling, who_high = HOTTEST_TABLES_K, "the continuum"
     for name, usable in usable_by_species.items():
         t_min = min(r["t_min_k"] for r in usable)
         t_max = max(r["t_max_k"] for r in usable)

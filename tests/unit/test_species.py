@@ -198,7 +198,7 @@ def test_a_species_clips_the_range_of_all():
 def test_approximate_ranges_are_noted():
     """Where the prior leaves the trusted range of a part of a table, a note says so."""
     found = select_species(spectrum(1.0, 4.0, 60), system(900.0), ("CH4",))
-    assert any(note.startswith("CH4 at 1.63-2.5 um is trusted at 200-600 K only") for note in found.notes)
+    assert any(note.startswith("CH4 at 1.63-2.5 um is trusted at 250-600 K only") for note in found.notes)
 
 
 def test_no_temperature_left_is_refused():
