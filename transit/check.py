@@ -178,7 +178,9 @@ def _fit_all(problem, hypotheses, seed, n_runs, settings, inflate, executor, pro
             break
         for task, run in _run_with_progress(tasks, executor, progress, inflate, "again "):
             name = task.hypothesis.name
-            runs[name][task.run % n_runs] = run
+            place = task.run % n_runs
+            if _is_better(run, runs[name][place]):
+                runs[name][place] = run
             spent[name] += run.likelihood_calls
             reruns[name] += 1
     fits = [_linear_fit(problem, name, seed, inflate) for name in ("flat", "slope")]
@@ -208,11 +210,20 @@ def _first_runs(problem, hypotheses, seed, n_runs, settings, inflate, executor, 
     return runs
 
 
+def _is_better(run, old) -> bool:
+    """Whether a run made again takes the place of the old one: by its weights, never by what it finds.
+
+    An old run without a flag was made again because it disagrees with another seed: the new one, which starts with
+    the best points of both, always replaces it.
+    """
+    return not old.flags or len(run.flags) < len(old.flags) or run.ess > old.ess
+
+
 def _reruns(problem, hypotheses, runs, seed, first_run, settings, inflate) -> list[FitTask]:
     """Tasks for the runs of hypotheses that have not converged: fresh draws, knowing the best points of all runs.
 
     A run with a flag is made again; where only the seeds disagree, the one with less evidence is, because a run
-    that misses a region finds too little. The new run takes the place of the old one, whatever it finds.
+    that misses a region finds too little.
     """
     tasks = []
     for hypothesis in hypotheses:

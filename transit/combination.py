@@ -10,7 +10,7 @@ import numpy as np
 # An evidence rests on at least this effective number of weighted draws.
 MIN_EFFECTIVE_SIZE = 300.0
 # One draw that carries more than this share of the weight is a sign of a region that the mixture misses.
-_MAX_WEIGHT_SHARE = 0.02
+MAX_WEIGHT_SHARE = 0.02
 _PARETO_LIMIT = 0.7
 
 
@@ -103,10 +103,10 @@ def run_flags(run: EvidenceRun, n_dim: int) -> tuple[str, ...]:
     flags = []
     if run.ess < MIN_EFFECTIVE_SIZE:
         flags.append(f"importance weights: effective size {run.ess:.0f}, below {MIN_EFFECTIVE_SIZE:.0f}")
-    if run.max_weight > _MAX_WEIGHT_SHARE:
+    if run.max_weight > MAX_WEIGHT_SHARE:
         flags.append(
             f"importance weights: one draw carries {100 * run.max_weight:.1f} % of the weight, "
-            f"more than {100 * _MAX_WEIGHT_SHARE:.0f} %"
+            f"more than {100 * MAX_WEIGHT_SHARE:.0f} %"
         )
     if run.pareto_k > _PARETO_LIMIT and run.ess < 3 * MIN_EFFECTIVE_SIZE:
         flags.append(

@@ -26,6 +26,7 @@ from scipy.special import logsumexp
 from transit import sampling
 from transit.budget import Budget, SamplerSettings
 from transit.combination import (
+    MAX_WEIGHT_SHARE,
     MIN_EFFECTIVE_SIZE,
     CombinedEvidence,
     EvidenceRun,
@@ -225,8 +226,10 @@ def _importance_draws(
         batch = frozen.draw(budget.final_draws, rng)
         draws.append(batch)
         ln_weights.append(target.ln_posterior(batch) - frozen.ln_density(batch))
-        _, own_err, ess = importance_estimate(np.concatenate(ln_weights))
-        if own_err <= budget.target_err and ess >= MIN_EFFECTIVE_SIZE:
+        together = np.concatenate(ln_weights)
+        ln_mean, own_err, ess = importance_estimate(together)
+        heaviest = np.exp(together.max() - ln_mean) / len(together)
+        if own_err <= budget.target_err and ess >= MIN_EFFECTIVE_SIZE and heaviest <= MAX_WEIGHT_SHARE:
             break
     return np.concatenate(draws), np.concatenate(ln_weights)
 
