@@ -108,7 +108,7 @@ def run_flags(run: EvidenceRun, n_dim: int) -> tuple[str, ...]:
             f"importance weights: one draw carries {100 * run.max_weight:.1f} % of the weight, "
             f"more than {100 * MAX_WEIGHT_SHARE:.0f} %"
         )
-    if run.pareto_k > _PARETO_LIMIT and run.ess < 3 * MIN_EFFECTIVE_SIZE:
+    if run.pareto_k > _PARETO_LIMIT and run.ess < 2 * MIN_EFFECTIVE_SIZE:
         flags.append(
             f"importance weights: tail shape {run.pareto_k:.2f}, above {_PARETO_LIMIT}, "
             f"with an effective size of only {run.ess:.0f}"
