@@ -32,7 +32,7 @@ Progress = Callable[[int, int, str], None]
 POOR_FIT_P = (
     0.001  # below this the best hypothesis does not fit, and all are fitted again with inflated errors
 )
-RERUN_ROUNDS = 2  # how often fits that have not converged are made again
+RERUN_ROUNDS = 2  # how often fits that have not converged are made again (never in a quick run)
 MODEL_DRAWS = 300
 FINE_RESOLVING_POWER = 120
 FEWEST_BINS = 3
@@ -172,7 +172,7 @@ def _fit_all(problem, hypotheses, seed, n_runs, settings, inflate, executor, pro
     runs = _first_runs(problem, hypotheses, seed, n_runs, settings, inflate, executor, progress)
     spent = {name: sum(run.likelihood_calls for run in own) for name, own in runs.items()}
     reruns = dict.fromkeys(runs, 0)
-    for round_number in range(1, RERUN_ROUNDS + 1):
+    for round_number in range(1, (RERUN_ROUNDS if n_runs > 1 else 0) + 1):
         tasks = _reruns(problem, hypotheses, runs, seed, round_number * n_runs, settings, inflate)
         if not tasks:
             break

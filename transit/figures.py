@@ -27,7 +27,8 @@ _WORD_SHADES = {"present": "#12307a", "hint": "#4f6fb8", "interchangeable": "#d9
 _QUIET_SHADE = "#a9adb2"
 _WORD_BAR_POINTS, _QUIET_BAR_POINTS = 6.5, 3.0
 _CROWDED_FROM_BINS = 120
-_LEGEND_LETTERS = 40  # longer names of parts are cut
+_LEGEND_LETTERS = 30  # longer names of parts are cut
+_LEGEND_LETTER_IN, _LEGEND_HANDLE_IN = 0.075, 0.62  # width of a letter, and of a line sample with its spaces
 
 _WIDTH_IN = 7.6
 _STRIP_ROW_IN = 0.2
@@ -272,8 +273,19 @@ def _add_scale_height_axis(axes: Axes, result: CheckResult) -> None:
 
 
 def _legend_columns(labels: Sequence[str]) -> int:
-    longest = max((len(label.replace("$_{", "").replace("}$", "")) for label in labels), default=0)
-    return min(len(labels), 4 if longest <= 13 else 3 if longest <= 20 else 2) or 1
+    """Most columns whose labels fit side by side inside the panel; labels fill column after column."""
+    room_in = _WIDTH_IN - _LEFT_IN - _RIGHT_IN - 0.2
+    widths_in = [_LEGEND_HANDLE_IN + _LEGEND_LETTER_IN * len(_bare(label)) for label in labels]
+    for columns in range(min(len(labels), 4), 1, -1):
+        rows = -(-len(labels) // columns)
+        if sum(max(widths_in[k : k + rows]) for k in range(0, len(labels), rows)) <= room_in:
+            return columns
+    return 1
+
+
+def _bare(label: str) -> str:
+    """A label without the marks of subscripts."""
+    return label.replace("$_{", "").replace("}$", "")
 
 
 def _add_legend(axes: Axes) -> None:

@@ -135,6 +135,8 @@ def write_table(path: Path, table: OpacityTable, step: float = 0.004) -> str:
         "pressure_bar": [float(p) for p in table.pressure_bar],
         "n_slices": table.ln_cross_section.shape[3],
         "step": step,
+        "units": "bands in cm-1, temperature in K, pressure in bar; values times step are ln of the cross section in "
+        "cm2 per molecule (collision pairs: cm5 per molecule squared)",
         "values_sha256": hashlib.sha256(values).hexdigest(),
         **table.header,
     }

@@ -131,7 +131,7 @@ def select_species(
     chosen = ranked if requested is not None else ranked[:MOST_DEFAULT_SPECIES]
     species = tuple(name for name in names if name in chosen)
     reasons = {
-        name: f"{found[name][0]} bins inside its bands"
+        name: _reason(spectrum, found[name][0], found[name][1])
         + (", chosen by default" if requested is None else ", asked for")
         for name in species
     }
@@ -144,7 +144,7 @@ def select_species(
         coverage[name] = {
             "covered_fraction": float(covered.mean()),
             "bins_in_bands": count,
-            "bands_covered_fraction": _bands_covered(spectrum, table),
+            "bands_covered_fraction": _bands_seen(spectrum, table) / len(table.bands_um),
         }
         notes += _held_constant(name, table, spectrum, (low, high))
         if not covered.all():
@@ -204,15 +204,17 @@ def _clip_temperature(wanted, usable_by_species, tables):
     return *clipped, notes
 
 
-def _bands_covered(spectrum: DepthSpectrum, table: OpacityTable) -> float:
-    """Fraction of a species' known bands (by number) that hold a bin of the spectrum."""
-    if not table.bands_um:
-        return 0.0
-    hit = [
+def _bands_seen(spectrum: DepthSpectrum, table: OpacityTable) -> int:
+    """How many of a species' known bands hold a bin of the spectrum."""
+    return sum(
         bool(np.any((spectrum.wavelength_um >= low) & (spectrum.wavelength_um <= high)))
         for low, high in table.bands_um
-    ]
-    return float(np.mean(hit))
+    )
+
+
+def _reason(spectrum: DepthSpectrum, count: int, table: OpacityTable) -> str:
+    bins = "1 bin" if count == 1 else f"{count} bins"
+    return f"{bins} inside {_bands_seen(spectrum, table)} of its {len(table.bands_um)} bands"
 
 
 def _held_constant(name, table, spectrum, temperature_range_k) -> tuple[str, ...]:

@@ -258,7 +258,7 @@ def test_many_absorbers_against_nested_sampling(n_absorbers):
 
 
 def assert_close(combined, expected, expected_err):
-    """Agreement without a demand on the flags: this posterior is harder than a retrieval's, and may be flagged."""
+    """Agreement without a demand on the flags: this posterior is harder than those of real spectra."""
     error = np.hypot(combined.ln_evidence_err, expected_err)
     assert error < 0.6
     assert combined.ln_evidence == pytest.approx(expected, abs=3 * error)

@@ -152,7 +152,6 @@ def test_whole_check_of_understated_errors():
     assert 1.4 < factor.median < 2.8
 
 
-@pytest.mark.slow
 def test_fifty_flat_spectra_through_the_whole_check():
     """50 flat spectra through `check_spectrum`: none `present`, at most two `hint`."""
     features = [
