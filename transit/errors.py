@@ -37,10 +37,6 @@ class OpacityTableError(TransitError, ValueError):
     """An opacity table that is missing, unreadable or altered."""
 
 
-class OutOfTableError(TransitError, ValueError):
-    """A temperature, pressure or wavelength beyond an opacity table: never extrapolated silently."""
-
-
 class OutputError(TransitError, OSError):
     """A result cannot be written where it was asked for."""
 

@@ -11,8 +11,6 @@ from transit.errors import SettingError
 from transit.models.limb import LimbState
 from transit.records import Priors
 
-NULLS = ("flat", "slope", "continuum")
-
 
 @dataclass(frozen=True)
 class Hypothesis:

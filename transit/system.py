@@ -11,19 +11,17 @@ import tomllib
 from dataclasses import fields
 from pathlib import Path
 
+from transit.atmosphere import BACKGROUNDS, equilibrium_temperature_k, gravity_m_s2
 from transit.errors import OutputError, SystemFileError
 from transit.records import Priors, System
 from transit.units import (
     ASTRONOMICAL_UNIT_M,
     EARTH_MASS_KG,
     EARTH_RADIUS_M,
-    GRAVITATION_SI,
     JUPITER_MASS_KG,
     JUPITER_RADIUS_M,
     SOLAR_RADIUS_M,
 )
-
-BACKGROUNDS = ("H2/He", "N2", "CO2", "H2O")
 
 # Ranges outside which a value is a slip of the unit or the decimal point rather than an unusual planet.
 _STAR_RANGES = {
@@ -292,7 +290,7 @@ def _check_bodies(star_rsun: float, planet_rjup: float, mass_mjup: float, shown:
             "expected a smaller one. Check both radii and their units.",
             shown,
         )
-    gravity = GRAVITATION_SI * mass_mjup * JUPITER_MASS_KG / radius_m**2
+    gravity = gravity_m_s2(mass_mjup * JUPITER_MASS_KG, radius_m)
     low, high = _GRAVITY_RANGE_M_S2
     if not low <= gravity <= high:
         raise SystemFileError(
@@ -322,7 +320,7 @@ def _temperature(values: dict[str, float], notes: list[str], shown: str) -> floa
             "expected a larger orbit. Check the value and its unit.",
             shown,
         )
-    temperature = teff * math.sqrt(star_m / axis_m) * 0.25**0.25
+    temperature = float(equilibrium_temperature_k(teff, values["star.radius_rsun"], axis_au))
     low, high = _PLANET_RANGES["equilibrium_temperature_k"]
     if not low <= temperature <= high:
         raise SystemFileError(
@@ -347,7 +345,7 @@ def _name(planet: dict, shown: str) -> str:
 
 
 def _background(planet: dict, shown: str) -> str:
-    background = planet.get("background", BACKGROUNDS[0])
+    background = planet.get("background", System.__dataclass_fields__["background"].default)
     if background not in BACKGROUNDS:
         raise SystemFileError(
             f"[planet] background is {background!r}, expected one of {', '.join(map(repr, BACKGROUNDS))}.",

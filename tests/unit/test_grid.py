@@ -6,7 +6,6 @@ from hypothesis import strategies as st
 from transit.models.grid import (
     BANDS_PER_CELL,
     SLICES,
-    band_centre_um,
     cell_key,
     cell_slices,
     make_grid,
@@ -196,9 +195,3 @@ def test_cells_have_different_keys():
     keys = [cell_key(bands) for bands in grid.bands]
     assert len(set(keys)) == 2
     assert cell_key(np.array([-3000])) == 0  # far beyond the grid a key must still be a seed
-
-
-def test_band_centres_lie_inside_their_bands():
-    """Centres are geometric means of the edges."""
-    edges = 1e4 / band_edges_cm1(700, 2)
-    assert band_centre_um(np.array([700, 701])) == pytest.approx(np.sqrt(edges[1:] * edges[:-1]))

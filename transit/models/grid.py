@@ -7,7 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 from scipy.sparse import csr_array
 
-from transit.opacity import BANDS_PER_E_FOLD, GRID_START_CM1, band_edges_cm1, band_index
+from transit.opacity import BANDS_PER_E_FOLD, band_edges_cm1, band_index
 from transit.units import SECOND_RADIATION_CM_K
 
 SLICES = 16
@@ -167,8 +167,3 @@ def slice_orders(n_species: int, cell_key: int) -> np.ndarray:
 def cell_key(bands: np.ndarray) -> int:
     """Key of a cell for `slice_orders`: its middle band on the common grid."""
     return int(max(bands[len(bands) // 2] + BANDS_PER_E_FOLD * 4, 0))
-
-
-def band_centre_um(bands: np.ndarray) -> np.ndarray:
-    """Wavelengths of band centres, micrometre."""
-    return 1e4 / (GRID_START_CM1 * np.exp((np.asarray(bands) + 0.5) / BANDS_PER_E_FOLD))

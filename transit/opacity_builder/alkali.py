@@ -9,7 +9,7 @@ import pandas as pd
 from scipy.special import voigt_profile
 
 from transit.opacity_builder.profiles import doppler_hwhm_cm1
-from transit.units import ATM_BAR
+from transit.units import ATM_BAR, LIGHT_SPEED_M_S
 
 # pi e^2 / (m_e c^2), cm: integrated cross section per unit oscillator strength over wavenumber.
 STRENGTH_PER_F_CM = 8.85282e-13
@@ -44,7 +44,7 @@ def doublet_cross_section_cm2(
     """
     total = np.zeros_like(grid_cm1)
     for line in doublet.itertuples(index=False):
-        natural = line.damping_s1 / (4 * np.pi * 2.99792458e10)
+        natural = line.damping_s1 / (4 * np.pi * 100 * LIGHT_SPEED_M_S)
         gamma = natural + GAMMA_2000K[atom] * (2000.0 / temperature_k) ** 0.7 * pressure_bar / ATM_BAR
         sigma = doppler_hwhm_cm1(line.centre_cm1, temperature_k, MOLAR_MASS[atom]) / np.sqrt(2 * np.log(2))
         distance = grid_cm1 - line.centre_cm1
