@@ -11,12 +11,13 @@ NULL_NAMES = ("flat", "slope", "continuum")
 NULL_PHRASES = {"flat": "a flat line", "slope": "a straight slope", "continuum": "a haze continuum"}
 
 # Every threshold of the verdict. Words follow Table 1 of Trotta (2008, Contemp. Phys. 49, 71), where ln B of
-# 5 (odds of about 150 to 1) is strong and 2.5 (about 12 to 1) is moderate evidence. The other two are ours:
+# 5 (odds of about 150 to 1) is strong and 2.5 (about 12 to 1) is moderate evidence. The others are ours:
 # 0.3 is about a tenth of the step between two words, and a share below 1 per cent moves the mean evidence by
 # 0.01 at most.
 WORD_THRESHOLDS = ((5.0, "present"), (2.5, "hint"))
 STANDS_FROM = 2.5  # a feature, a slope or a species alone counts from here
 LARGEST_ERR = 0.3  # an error of ln B above this must not straddle a threshold
+CLEAR_MARGIN = 20.0  # a doubtful fit is called harmless only where words are further than this from changing
 SMALLEST_SHARE = 0.01  # of the mean evidence, for a fit to count among those that decide the feature
 
 NOT_SHOWN = "not shown"
@@ -189,7 +190,7 @@ def judge(
         _species_sentence(words, deciders, feature, comparisons),
         _lowered_sentence(lowered, deciders),
         _slope_sentence(feature, fits, inflated),
-        _convergence_sentence(_deciding_fits(fits, fitted, words), fits, inflated),
+        _convergence_sentence(_deciding_fits(fits, fitted, words), fits, inflated, comparisons),
     ]
     return Verdict(feature=feature, species=words, sentence=" ".join(s for s in sentences if s))
 
@@ -411,10 +412,30 @@ def _deciding_fits(fits: Sequence[Fit], fitted: Sequence[str], words: Mapping[st
     return names | {x for x in fitted if words[x] == INTERCHANGEABLE or len(fitted) == 1}
 
 
-def _convergence_sentence(names: set[str], fits: Sequence[Fit], inflated: Sequence[Fit]) -> str:
+def _convergence_sentence(
+    names: set[str], fits: Sequence[Fit], inflated: Sequence[Fit], comparisons: Sequence[Comparison]
+) -> str:
     failed = [fit.name for fit in (*fits, *inflated) if not fit.sampling.get("converged", True)]
     failed = [name for name in dict.fromkeys(failed) if name in names]
     if not failed:
         return ""
     fits_did = f"The fit {failed[0]}" if len(failed) == 1 else f"The fits {_join(failed)}"
-    return f"{fits_did} did not converge: treat these words as provisional."
+    if any(_near_a_threshold(name, fits, comparisons) for name in failed):
+        return f"{fits_did} did not converge: treat these words as provisional."
+    return (
+        f"{fits_did} did not converge, but every word that rests on it is more than {CLEAR_MARGIN:g} in ln B "
+        "from changing."
+    )
+
+
+def _near_a_threshold(name: str, fits: Sequence[Fit], comparisons: Sequence[Comparison]) -> bool:
+    """Whether a comparison that a fit enters decides a word by no more than `CLEAR_MARGIN`."""
+    species = next((fit.species for fit in fits if fit.name == name), ())
+    low, high = WORD_THRESHOLDS[-1][0] - CLEAR_MARGIN, WORD_THRESHOLDS[0][0] + CLEAR_MARGIN
+    for c in comparisons:
+        # With two species, `all` without one is the other's own fit.
+        is_rest = c.kind == "left_out" and species and c.species not in species
+        enters = name in (c.model, c.against) or is_rest or (c.kind == "feature" and bool(species))
+        if enters and low <= deciding(c)[0] <= high:
+            return True
+    return False

@@ -255,3 +255,15 @@ def test_sentence_never_speaks_of_sigma(values):
     sentence = verdict_of(ONE, values, {"H2O": 2.7}).sentence
     assert "sigma" not in sentence
     assert "σ" not in sentence
+
+
+def test_doubtful_fit_far_from_every_threshold_is_called_harmless():
+    """A fit without convergence is named all the same, but does not make clear words provisional."""
+    fits = list(
+        fits_from({"H2O": 90.0, "all": 900.0, "all-H2O": 100.0, "all-CO2": 800.0, "all-CH4": 800.0}, THREE)
+    )
+    index = next(i for i, fit in enumerate(fits) if fit.name == "all-H2O")
+    fits[index] = dataclasses.replace(fits[index], sampling={"converged": False})
+    sentence = judge(build_comparisons(fits, (), THREE), THREE, {}, fits).sentence
+    assert "all-H2O did not converge, but every word" in sentence
+    assert "provisional" not in sentence
