@@ -25,7 +25,7 @@ from transit.problem import FitTask, Problem, run_fit, share_model
 from transit.records import CheckResult, DepthSpectrum, Fit, Interval, System, offset_name
 from transit.species import Selection, select_species
 from transit.units import JUPITER_RADIUS_M, PPM
-from transit.verdict import best_model, best_null, build_comparisons, judge
+from transit.verdict import best_null, build_comparisons, judge
 
 Progress = Callable[[int, int, str], None]
 
@@ -369,13 +369,14 @@ def _assemble(problem, name, species, n_free, ln_z, ln_z_err, chi2, columns, uni
 
 
 def _with_fine_models(problem: Problem, hypotheses, fits: tuple[Fit, ...]):
-    """Models of the best null and the best hypothesis with species on a dense grid, for drawing."""
+    """Models of the best null and the two best hypotheses with species on a dense grid, for drawing."""
     low = (problem.spectrum.wavelength_um - problem.spectrum.half_width_um).min()
     high = (problem.spectrum.wavelength_um + problem.spectrum.half_width_um).max()
     count = int(np.clip(np.log(high / low) * FINE_RESOLVING_POWER, 60, 400))
     edges = np.geomspace(low, high, count + 1)
     fine_um = np.sqrt(edges[1:] * edges[:-1])
-    wanted = {fit.name for fit in (best_null(fits), best_model(fits)) if fit is not None}
+    with_species = sorted((fit for fit in fits if fit.species), key=lambda fit: -fit.ln_evidence)
+    wanted = {fit.name for fit in (best_null(fits), *with_species[:2])}
     by_name = {hypothesis.name: hypothesis for hypothesis in hypotheses}
     model = problem.model_on(fine_um, 0.5 * np.diff(edges)) if wanted & set(by_name) else None
     out = []
