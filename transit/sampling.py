@@ -67,7 +67,7 @@ def guided_moves(
     -------
     list of (Move, float)
         Block moves 0.45, independence 0.25, differential evolution 0.2 (ter Braak 2006), stretch 0.1 (Goodman
-        & Weare 2010): on retrieval-like targets the first two jump three to ten times further per call, and
+        & Weare 2010): on targets like ours the first two jump three to ten times further per call, and
         the last two work where the guide is poor.
 
     Notes
