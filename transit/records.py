@@ -7,6 +7,7 @@ from dataclasses import dataclass, field
 import numpy as np
 
 from transit.errors import SettingError
+from transit.thresholds import Thresholds
 from transit.units import PPM
 
 
@@ -114,6 +115,33 @@ class Priors:
     slope_scale_heights: float = 10.0  # half range of the slope, scale heights per e-fold of wavelength
     offset_ppm: float = 100.0  # standard deviation of the normal prior of a segment's offset
     error_factor: tuple[float, float] = (1.0, 10.0)  # log-uniform, used only when errors are inflated
+    step_ppm: float = 300.0  # standard deviation of the normal prior of a detector step, in the rival `step`
+    outlier_ppm: float = 500.0  # the same for a single bad bin, in the rival `one-bin`
+    bump_scale_heights: float = 10.0  # the bump of the rival `bump` is uniform from 0 to this
+    spot_fraction: tuple[float, float] = (0.0, 0.5)  # of the disc outside the chord, rival `star`
+    spot_contrast_k: tuple[float, float] = (-1500.0, 0.0)  # spots less photosphere
+    facula_fraction: tuple[float, float] = (0.0, 0.5)
+    facula_contrast_k: tuple[float, float] = (0.0, 300.0)
+    cloud_fraction: tuple[float, float] = (0.0, 1.0)  # of the limb under the deck, only with patchy cloud
+    ar1_coefficient: tuple[float, float] = (0.0, 0.9)  # correlation of neighbours, only with AR(1) noise
+
+
+@dataclass(frozen=True, slots=True)
+class Nuisances:
+    """What may vary in every hypothesis alike, besides the level; all but `offsets` are off by default.
+
+    `offsets`: each segment after the first; `step_um` with `steps`: steps at these wavelengths; `slope`: a straight
+    line in ln wavelength; `inflation`: a factor on all errors; `ar1`: correlation of neighbouring bins; `patchy`:
+    the cloud deck covers a part of the limb only. `step_um` without `steps` is for the rival `step` alone.
+    """
+
+    offsets: bool = True
+    steps: bool = False
+    slope: bool = False
+    inflation: bool = False
+    ar1: bool = False
+    patchy: bool = False
+    step_um: tuple[float, ...] = ()
 
 
 @dataclass(frozen=True, slots=True)
@@ -138,6 +166,7 @@ class System:
     errors: tuple[tuple[str, float], ...] = ()
     source: str = ""
     notes: tuple[str, ...] = ()
+    thresholds: Thresholds = field(default_factory=Thresholds)
 
 
 def offset_name(segment: str) -> str:
@@ -194,8 +223,15 @@ class Fit:
 class Comparison:
     """One hypothesis against another.
 
-    kind is "alone" (a hypothesis with one species against one null), "left_out" (`all` against `all-X`) or
-    "feature" (mean evidence of the hypotheses with species against the best null; model is "mean").
+    kind is "alone" (a hypothesis with one species against one null), "left_out" (`all` against `all-X`),
+    "feature" (mean evidence of the hypotheses with species against the best null; model is "mean") or "rival" (the
+    best hypothesis with a species, or with any when `species` is None, against an explanation without it; `counts`
+    is False where the rival is the same feature seen without a name, a bump inside the species' bands).
+
+    The false-alarm probabilities are frequentist and stand beside ln B, never for it: `p_named` that noise reaches
+    the observed ln B of this species, `p_best_of_n` that the best of all species tried does, `p_null` p_named by null
+    simulated. `p_named` is the largest of these, an upper bound; `p_err` its Monte Carlo error. They belong to
+    "alone" entries against the best null, to "left_out" and (p_best_of_n only) to "feature".
     """
 
     kind: str
@@ -208,13 +244,83 @@ class Comparison:
     delta_chi2: float
     ln_bayes_factor_inflated: float | None = None
     ln_bayes_factor_inflated_err: float | None = None
+    p_named: float | None = None
+    p_best_of_n: float | None = None
+    p_err: float | None = None
+    p_null: dict[str, float] = field(default_factory=dict)
+    counts: bool = True
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Rival:
+    """An explanation other than an absorber, on the shoulders of a base hypothesis.
+
+    `name` is "star", "step", "bump" or "one-bin". `base` is "null" (the rival stands on the nulls, and competes with
+    every species and with the feature) or "all-X" (on the best fit without X: it competes with `species` X only).
+    `ln_evidence` compares with those of the fits; the inflated pair with those of the inflated fits. `counts`
+    maps species to whether the rival counts against them. `phrase` names it in a sentence ("a bump at 1.25 um",
+    "spots or faculae of the star"). `parameters` are medians with 68 % intervals.
+    """
+
+    name: str
+    base: str
+    species: str | None
+    ln_evidence: float
+    ln_evidence_err: float
+    phrase: str
+    parameters: dict[str, Interval] = field(default_factory=dict)
+    ln_evidence_inflated: float | None = None
+    ln_evidence_inflated_err: float | None = None
+    counts: dict[str, bool] = field(default_factory=dict)
+    chi2: float | None = None
+
+
+@dataclass(frozen=True, slots=True)
+class Sensitivity:
+    """What a spectrum could show of a species, from bins, errors and priors alone.
+
+    `amplitude_scale_heights` is the peak-to-trough height of the species' own features over the bins at which `ln B`
+    against the best null reaches `ln_bayes_factor` with the chance `chance`; None when no amplitude of the prior
+    does (`largest_scale_heights` was the largest tried). `sentence` states it.
+    """
+
+    amplitude_scale_heights: float | None
+    amplitude_err: float | None
+    largest_scale_heights: float
+    chance: float
+    ln_bayes_factor: float
+    sentence: str
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class FalseAlarms:
+    """Null distributions of ln B for one very spectrum: its bins, errors, species and priors.
+
+    `ln_bayes_factor` (K,) are values of a table; `p_named` maps species to p at those values (largest of the nulls),
+    `p_best_of_n` is for the best of all species; `p_named_err` and `p_best_of_n_err` are Monte Carlo errors.
+    `observed` maps species to a dict with the linearised library's ln_bayes_factor of the data, delta_chi2,
+    p_named, p_best_of_n, p_err, p_null {null: p}, p_delta_chi2; key "" is the best of all. `left_out` maps species
+    to a dict with ln_bayes_factor, p_named, p_err, p_null. `error_factor` multiplied the quoted errors.
+    `smallest_p` is the smallest that the simulation resolves: smaller ones are bounds.
+    """
+
+    ln_bayes_factor: np.ndarray
+    p_named: dict[str, np.ndarray]
+    p_named_err: dict[str, np.ndarray]
+    p_best_of_n: np.ndarray
+    p_best_of_n_err: np.ndarray
+    observed: dict[str, dict]
+    left_out: dict[str, dict]
+    n_simulations: int
+    error_factor: float
+    smallest_p: float
 
 
 @dataclass(frozen=True, slots=True)
 class Verdict:
     """Words by species and for the feature, with the sentence that opens the report.
 
-    Words: "present", "hint", "interchangeable", "not shown", "untested".
+    Words: "present", "hint", "confounded", "interchangeable", "not shown", "untested".
     """
 
     feature: str
@@ -247,6 +353,9 @@ class CheckResult:
     bands_um: dict[str, tuple[tuple[float, float], ...]]
     warnings: tuple[str, ...] = ()
     timing: dict = field(default_factory=dict)
+    rivals: tuple[Rival, ...] = ()
+    false_alarms: FalseAlarms | None = None
+    sensitivity: dict[str, Sensitivity] = field(default_factory=dict)
 
     def fit(self, name: str) -> Fit:
         """Return the fit of the hypothesis `name` (quoted errors)."""
