@@ -4,7 +4,17 @@ from __future__ import annotations
 
 import numpy as np
 
-from transit.records import CheckResult, DepthSpectrum, Fit, Interval, System
+from transit.records import (
+    CheckResult,
+    DepthSpectrum,
+    FalseAlarms,
+    Fit,
+    Interval,
+    Rival,
+    Sensitivity,
+    System,
+)
+from transit.thresholds import Thresholds
 from transit.verdict import best_null, build_comparisons, judge
 
 BANDS_UM = {
@@ -17,6 +27,7 @@ BANDS_UM = {
 }
 SCALE_HEIGHT_PPM = 180.0
 MEDIAN_DEPTH = 0.0146
+LN_EVIDENCE_LEVEL = 200.0
 
 
 def fit_record(
@@ -83,6 +94,95 @@ def fits_from(ln_evidences: dict[str, float], species: tuple[str, ...], **option
     )
 
 
+PHRASES = {
+    "star": "unocculted spots or faculae of the star",
+    "step": "a step at 1.40 um",
+    "bump": "a bump at 1.25 um",
+    "one-bin": "a single bad bin at 1.41 um",
+}
+
+
+def rival_record(
+    name: str,
+    ln_evidence: float,
+    ln_evidence_inflated: float | None = None,
+    *,
+    species: str | None = None,
+    counts: dict[str, bool] | None = None,
+    ln_evidence_err: float = 0.03,
+    chi2: float | None = None,
+) -> Rival:
+    """A rival on the nulls, or on the best fit without `species`."""
+    return Rival(
+        name=name,
+        base="null" if species is None else f"all-{species}",
+        species=species,
+        ln_evidence=ln_evidence,
+        ln_evidence_err=ln_evidence_err,
+        phrase=PHRASES[name],
+        parameters={"amplitude_ppm": Interval(120.0, 90.0, 150.0, "ppm")},
+        ln_evidence_inflated=ln_evidence_inflated,
+        ln_evidence_inflated_err=None if ln_evidence_inflated is None else 0.03,
+        counts=counts or {},
+        chi2=chi2,
+    )
+
+
+def sensitivity_record(amplitude_scale_heights: float | None) -> Sensitivity:
+    """What a spectrum could show, from a made-up amplitude (None: nothing up to 12 scale heights)."""
+    return Sensitivity(
+        amplitude_scale_heights=amplitude_scale_heights,
+        amplitude_err=None if amplitude_scale_heights is None else 0.1,
+        largest_scale_heights=12.0,
+        chance=0.8,
+        ln_bayes_factor=5.0,
+        sentence="A made-up sentence.",
+    )
+
+
+def false_alarms_record(
+    p_named: dict[str, float], p_best_of_n: float, p_left_out: dict[str, float] | None = None, **options
+) -> FalseAlarms:
+    """False alarms with the p of the observed ln B given, and a table whose p is exp(-1.5 ln B) / 10."""
+    ln_b = np.array([0.0, 1.0, 2.5, 5.0, 8.0, 12.0])
+    p = 0.1 * np.exp(-1.5 * ln_b)
+    nulls = {"flat": 0.5, "slope": 1.0}
+    observed = {
+        x: {
+            "ln_bayes_factor": 4.0,
+            "delta_chi2": 14.0,
+            "p_named": value,
+            "p_best_of_n": min(1.0, 2 * value),
+            "p_err": value / 20,
+            "p_null": {name: share * value for name, share in nulls.items()},
+            "p_delta_chi2": value,
+        }
+        for x, value in p_named.items()
+    }
+    observed[""] = {
+        "ln_bayes_factor": 4.0,
+        "delta_chi2": 14.0,
+        "p_best_of_n": p_best_of_n,
+        "p_err": p_best_of_n / 20,
+    }
+    left_out = {
+        x: {"ln_bayes_factor": 3.0, "p_named": value, "p_err": value / 20, "p_null": {f"all-{x}": value}}
+        for x, value in (p_left_out or {}).items()
+    }
+    return FalseAlarms(
+        ln_bayes_factor=ln_b,
+        p_named={x: p / 3 for x in p_named},
+        p_named_err={x: p / 60 for x in p_named},
+        p_best_of_n=p,
+        p_best_of_n_err=p / 20,
+        observed=observed,
+        left_out=left_out,
+        n_simulations=20_000,
+        error_factor=options.get("error_factor", 1.0),
+        smallest_p=1e-8,
+    )
+
+
 def shape(wavelength_um: np.ndarray, species: tuple[str, ...]) -> np.ndarray:
     """Depth with smooth bumps of a few scale heights where the species absorb."""
     wavelength_um = np.asarray(wavelength_um, float)
@@ -139,8 +239,18 @@ def check_result(
     fine: bool = True,
     n_bands: int | None = None,
     planet_name: str = "Example-1 b",
+    rivals: tuple[Rival, ...] = (),
+    false_alarms: FalseAlarms | None = None,
+    sensitivity: dict[str, Sensitivity] | None = None,
+    thresholds: Thresholds | None = None,
+    star_teff_k: float = 5500.0,
+    skipped: tuple[str, ...] = (),
 ) -> CheckResult:
-    """Result of a check that was never run, self-consistent enough to be drawn, printed and written."""
+    """Result of a check that was never run, self-consistent enough to be drawn, printed and written.
+
+    Evidences are over an arbitrary level of `LN_EVIDENCE_LEVEL`, which those of rivals must include.
+    """
+    thresholds, sensitivity = thresholds or Thresholds(), sensitivity or {}
     spectrum = spectrum_record(truth=truth) if spectrum is None else spectrum
     ln_evidences = {"H2O": 9.0, "all": 8.5} if ln_evidences is None else ln_evidences
     low, high = spectrum.wavelength_um.min() * 0.97, spectrum.wavelength_um.max() * 1.03
@@ -158,13 +268,15 @@ def check_result(
             chi2 = float(np.sum(((spectrum.depth - model) / spectrum.depth_err) ** 2))
             options = {"model": model, "chi2": chi2, "n_bins": spectrum.n_bins, "inflated": grown}
             dense = curve(name, fine_um) if fine else None
-            out.append(fit_record(name, members, 200.0 + values.get(name, 0.0), fine=dense, **options))
+            out.append(
+                fit_record(name, members, LN_EVIDENCE_LEVEL + values.get(name, 0.0), fine=dense, **options)
+            )
         return tuple(out)
 
     quoted = fits(ln_evidences, False)
     inflated = () if ln_evidences_inflated is None else fits(ln_evidences_inflated, True)
     untested = untested or {}
-    comparisons = build_comparisons(quoted, inflated, species)
+    comparisons = build_comparisons(quoted, inflated, species, rivals, false_alarms)
     assert best_null(quoted).name in {"flat", "slope", "continuum"}
     return CheckResult(
         spectrum=spectrum,
@@ -173,15 +285,17 @@ def check_result(
             planet_radius_rjup=1.27,
             planet_mass_mjup=0.96,
             equilibrium_temperature_k=1120.0,
-            star_teff_k=5500.0,
+            star_teff_k=star_teff_k,
             planet_name=planet_name,
             errors=(("planet_mass_mjup", 0.05),),
             source="example.toml",
             notes=("The equilibrium temperature was computed for zero albedo.",),
+            thresholds=thresholds,
         ),
         settings={
             "seed": 1,
             "quick": quick,
+            "skipped": list(skipped),
             "species": list(species),
             "species_reasons": {x: "asked for" for x in species},
             "untested": dict(untested),
@@ -200,11 +314,24 @@ def check_result(
         fits=quoted,
         inflated=inflated,
         comparisons=comparisons,
-        verdict=judge(comparisons, species, untested, quoted, inflated),
+        verdict=judge(
+            comparisons,
+            species,
+            untested,
+            quoted,
+            inflated,
+            thresholds=thresholds,
+            sensitivity=sensitivity,
+            rivals=rivals,
+            star_teff_k=star_teff_k,
+        ),
         scale_height_km=610.0,
         scale_height_ppm=SCALE_HEIGHT_PPM,
         fine_wavelength_um=fine_um,
         bands_um={x: BANDS_UM[x][:n_bands] for x in species},
         warnings=warnings,
         timing={"read": 0.01, "fits": 61.3},
+        rivals=rivals,
+        false_alarms=false_alarms,
+        sensitivity=sensitivity,
     )

@@ -122,6 +122,9 @@ class Priors:
     spot_contrast_k: tuple[float, float] = (-1500.0, 0.0)  # spots less photosphere
     facula_fraction: tuple[float, float] = (0.0, 0.5)
     facula_contrast_k: tuple[float, float] = (0.0, 300.0)
+    # Blend of the two grids of stellar spectra: 0 the first, 1 the other. Bands of observed late M dwarfs are weaker
+    # than in either, by as much as the grids differ (docs/stars.md), so that the range goes beyond the first.
+    star_grid_mix: tuple[float, float] = (-0.8, 1.0)
     cloud_fraction: tuple[float, float] = (0.0, 1.0)  # of the limb under the deck, only with patchy cloud
     ar1_coefficient: tuple[float, float] = (0.0, 0.9)  # correlation of neighbours, only with AR(1) noise
 
@@ -172,6 +175,11 @@ class System:
 def offset_name(segment: str) -> str:
     """Name of the parameter that holds the offset of a segment."""
     return f"offset_ppm: {segment}"
+
+
+def step_name(wavelength_um: float) -> str:
+    """Name of the parameter that holds the step at a wavelength."""
+    return f"step_ppm: {wavelength_um:g} um"
 
 
 @dataclass(frozen=True, slots=True)
@@ -337,6 +345,7 @@ class CheckResult:
     `inflated` is empty unless all hypotheses were fitted again with free error inflation.
     `fine_wavelength_um` is the grid of the fine models. `bands_um` maps species to the (lower, upper) wavelength
     intervals of its known bands, to be marked in the figure. `warnings` are sentences for the report.
+    `with_star` are fits with an inhomogeneous star, `star` and that of star and atmosphere together.
     `timing` maps stage names to wall seconds and is written apart, since it differs from run to run.
     """
 
@@ -356,6 +365,7 @@ class CheckResult:
     rivals: tuple[Rival, ...] = ()
     false_alarms: FalseAlarms | None = None
     sensitivity: dict[str, Sensitivity] = field(default_factory=dict)
+    with_star: tuple[Fit, ...] = ()
 
     def fit(self, name: str) -> Fit:
         """Return the fit of the hypothesis `name` (quoted errors)."""

@@ -2,17 +2,23 @@
 
 from __future__ import annotations
 
+import math
 import textwrap
 from collections.abc import Sequence
 
 from transit.records import CheckResult, Fit
+from transit.report_chances import chance_lines
+from transit.thresholds import Thresholds
 from transit.verdict import STANDING_WORDS, alone_against_best_null, best_model, best_null, format_ln_b
 
 MAX_LINES = 40
 MAX_COLUMNS = 80
 MAX_SENTENCE_LINES = 9
 MAX_TABLE_LINES = 11
+MIN_CHANCE_LINES = 4
 MIN_NOTE_LINES = 3
+MIN_ASSUMED_LINES = 3
+MIN_ROOM = 4  # lines for what the numbers rest on and for notes, whatever else there is
 
 _LABEL_COLUMNS = 9
 _CELL_COLUMNS = 13
@@ -32,7 +38,29 @@ _PRIOR_LABELS = {
     "slope_scale_heights": "slope +-H",
     "offset_ppm": "offset/ppm, normal, sd",
     "error_factor": "error factor, log-uniform,",
+    "step_ppm": "step/ppm, normal, sd",
+    "outlier_ppm": "bad bin/ppm, normal, sd",
+    "bump_scale_heights": "bump/H, up to",
+    "spot_fraction": "spots of disc",
+    "spot_contrast_k": "spots/K",
+    "facula_fraction": "faculae of disc",
+    "facula_contrast_k": "faculae/K",
+    "star_grid_mix": "blend of star grids",
+    "cloud_fraction": "deck over limb",
+    "ar1_coefficient": "AR(1)",
 }
+# Priors that only some results rest on: those of a rival, or of what may vary in every hypothesis alike.
+_RIVAL_OF_PRIOR = {
+    "step_ppm": "step",
+    "outlier_ppm": "one-bin",
+    "bump_scale_heights": "bump",
+    "spot_fraction": "star",
+    "spot_contrast_k": "star",
+    "facula_fraction": "star",
+    "facula_contrast_k": "star",
+    "star_grid_mix": "star",
+}
+_NUISANCE_OF_PRIOR = {"cloud_fraction": "patchy", "ar1_coefficient": "ar1", "step_ppm": "steps"}
 
 
 def summary(result: CheckResult) -> str:
@@ -46,18 +74,30 @@ def summary(result: CheckResult) -> str:
     Returns
     -------
     str
-        Verdict, comparisons, goodness of fit, assumptions, warnings and notes, and what the words do not
-        mean; at most `MAX_LINES` lines of at most `MAX_COLUMNS` columns. What has to be cut is counted.
+        Verdict, comparisons, chances and rivals, goodness of fit, assumptions, warnings and notes, and what the
+        words do not mean; at most `MAX_LINES` lines of at most `MAX_COLUMNS` columns. What is cut is counted.
     """
     sentence = _cut(_wrap(result.verdict.sentence), MAX_SENTENCE_LINES)
     table = _cut(_comparison_lines(result), MAX_TABLE_LINES)
+    chances = chance_lines(result)
     goodness = _goodness_lines(result)
-    closing = _closing_lines(result)
+    assumed = _assumption_lines(result)
     notes = _note_paragraphs(result)
-    blanks = 4
+    closing = _closing_lines(result)
+    whole = [sentence, table, chances, goodness, assumed, [line for note in notes for line in note] + closing]
+    if sum(len(block) + 1 for block in whole if block) - 1 <= MAX_LINES:
+        return _joined(whole)
+    blanks = 3
     room = MAX_LINES - len(sentence) - len(table) - len(goodness) - len(closing) - blanks
-    assumed = _cut(_assumption_lines(result), room - min(sum(map(len, notes)), MIN_NOTE_LINES))
-    blocks = [sentence, table, goodness, assumed, _whole_paragraphs(notes, room - len(assumed)) + closing]
+    chances = _cut(chances, max(room - MIN_ROOM, min(MIN_CHANCE_LINES, room)))
+    room -= len(chances)
+    for_notes = min(sum(map(len, notes)), MIN_NOTE_LINES)
+    assumed = _cut(assumed, max(room - for_notes, min(room, MIN_ASSUMED_LINES)))
+    last = _whole_paragraphs(notes, room - len(assumed)) + closing
+    return _joined([sentence, table + chances, goodness, assumed + last])
+
+
+def _joined(blocks: Sequence[Sequence[str]]) -> str:
     return "\n\n".join("\n".join(block) for block in blocks if block)
 
 
@@ -95,7 +135,7 @@ def _whole_paragraphs(paragraphs: Sequence[list[str]], room: int) -> list[str]:
 
 def _comparison_lines(result: CheckResult) -> list[str]:
     """One row for the feature and each species: ln B alone and left out, at quoted and inflated errors."""
-    grown = bool(result.inflated)
+    grown, thresholds = bool(result.inflated), result.system.thresholds
     left_out = {c.species: c for c in result.comparisons if c.kind == "left_out"}
     columns = 2 if grown else 1
     width = columns * _CELL_COLUMNS
@@ -109,14 +149,16 @@ def _comparison_lines(result: CheckResult) -> list[str]:
     for c in result.comparisons:
         if c.kind == "feature":
             pairs = [_pair(c), _inflated(c)]
-            rows.append(_row("feature", pairs[:columns], columns * len(groups), result.verdict.feature))
+            rows.append(
+                _row("feature", pairs[:columns], columns * len(groups), result.verdict.feature, thresholds)
+            )
     for species, word in result.verdict.species.items():
         pairs = []
         if any(c.kind == "alone" and c.species == species for c in result.comparisons):
             pairs += alone_against_best_null(result.comparisons, species)[:columns]
         if species in left_out:
             pairs += [_pair(left_out[species]), _inflated(left_out[species])][:columns]
-        rows.append(_row(species, pairs, columns * len(groups), word))
+        rows.append(_row(species, pairs, columns * len(groups), word, thresholds))
     return head + rows if rows else []
 
 
@@ -130,8 +172,10 @@ def _inflated(comparison):
     return comparison.ln_bayes_factor_inflated, comparison.ln_bayes_factor_inflated_err or 0.0
 
 
-def _row(label: str, pairs: Sequence[tuple[float, float] | None], n_cells: int, word: str) -> str:
-    cells = [_cell(pair) for pair in pairs] + ["-"] * (n_cells - len(pairs))
+def _row(
+    label: str, pairs: Sequence[tuple[float, float] | None], n_cells: int, word: str, thresholds: Thresholds
+) -> str:
+    cells = [_cell(pair, thresholds) for pair in pairs] + ["-"] * (n_cells - len(pairs))
     text = f"{label[: _LABEL_COLUMNS - 1]:<{_LABEL_COLUMNS}}"
     text += "".join(f"{cell:>{_CELL_COLUMNS}}" for cell in cells)
     # Four cells leave a word of fifteen letters no more than a single space in front of it.
@@ -139,12 +183,12 @@ def _row(label: str, pairs: Sequence[tuple[float, float] | None], n_cells: int, 
     return f"{text}{gap}{word}"[:MAX_COLUMNS]
 
 
-def _cell(pair: tuple[float, float] | None) -> str:
+def _cell(pair: tuple[float, float] | None, thresholds: Thresholds) -> str:
     if pair is None:
         return "-"
     value, err = pair
     decimals = 2 if abs(value) < 100 else 1 if abs(value) < 10_000 else 0
-    text = f"{format_ln_b(value, decimals)}+-{err:.2f}"
+    text = f"{format_ln_b(value, decimals, thresholds)}+-{err:.2f}"
     return text if len(text) < _CELL_COLUMNS else f"{value:.3g}+-{err:.1g}"
 
 
@@ -164,7 +208,7 @@ def _goodness_lines(result: CheckResult) -> list[str]:
 
 
 def _goodness_row(fit: Fit, roles: Sequence[str]) -> str:
-    p_value = f"{fit.p_chi2:.2g}" if fit.p_chi2 >= 1e-99 else "<1e-99"
+    p_value = f"{fit.p_chi2:.2g}" if fit.p_chi2 >= 1e-99 else "-" if math.isnan(fit.p_chi2) else "<1e-99"
     evidence = f"{fit.ln_evidence:.2f}+-{fit.ln_evidence_err:.2f}"
     text = f"{fit.name:<{_LABEL_COLUMNS + 4}}{fit.chi2:>10.1f}{fit.dof:>6d}{p_value:>10}{evidence:>18}"
     return f"{text}  {', '.join(roles)}".rstrip()[:MAX_COLUMNS]
@@ -178,8 +222,10 @@ def _assumption_lines(result: CheckResult) -> list[str]:
     spectrum, system, settings = result.spectrum, result.system, result.settings
     run = f"seed {settings.get('seed', '?')}"
     if settings.get("quick"):
-        run += "; quick run: rougher, repeat it without --quick before you quote it"
+        run += "; quick run: rougher, repeat without --quick before quoting it"
     lines = _wrap(run, "Run")
+    if skipped := settings.get("skipped"):
+        lines += _wrap("; ".join(text.rstrip(".") for text in skipped), "Skipped")
     lines += _inflation_lines(result)
     parts = len(spectrum.segment_names)
     lines += _wrap(
@@ -198,14 +244,29 @@ def _assumption_lines(result: CheckResult) -> list[str]:
         f"{result.scale_height_ppm:.0f} ppm of depth",
         "Air",
     )
-    ranges = {name: value for name, value in settings.get("priors", {}).items() if value not in _UNSET}
+    ranges = {
+        name: value
+        for name, value in settings.get("priors", {}).items()
+        if value not in _UNSET and _is_used(name, result)
+    }
     priors = [_prior_text(name, value) for name, value in ranges.items()]
     if priors:
         lines += _wrap(f"{'; '.join(priors)}; uniform unless named otherwise", "Priors")
     lines += _species_lines(settings)
     tables = settings.get("tables", {})
-    lines += _wrap(", ".join(tables) if tables else "none covers this spectrum", "Tables")
+    # One table a species is the rule, and what the rule leaves unsaid needs no line.
+    if list(tables) != settings.get("species", []):
+        lines += _wrap(", ".join(tables) if tables else "none covers this spectrum", "Tables")
     return lines
+
+
+def _is_used(prior: str, result: CheckResult) -> bool:
+    """Whether a prior belongs to something that this result holds."""
+    rival, nuisance = _RIVAL_OF_PRIOR.get(prior), _NUISANCE_OF_PRIOR.get(prior)
+    if rival is None and nuisance is None:
+        return True
+    is_on = bool(nuisance and result.settings.get("nuisances", {}).get(nuisance))
+    return is_on or any(found.name == rival for found in result.rivals)
 
 
 def _inflation_lines(result: CheckResult) -> list[str]:
@@ -252,7 +313,9 @@ def _note_paragraphs(result: CheckResult) -> list[list[str]]:
 
 
 def _closing_lines(result: CheckResult) -> list[str]:
-    standing = {*STANDING_WORDS, "interchangeable"}
-    if standing & {result.verdict.feature, *result.verdict.species.values()}:
+    words = {result.verdict.feature, *result.verdict.species.values()}
+    if {*STANDING_WORDS, "interchangeable"} & words:
         return ["A detected molecule is not a detected biosphere; ln B is not a sigma."]
+    if "confounded" in words:
+        return ["What is confounded is not a detected molecule; ln B is not a sigma."]
     return ["Not shown is not the same as absent; ln B is not a sigma."]

@@ -1,4 +1,4 @@
-"""System files: star, planet and priors of one target, in TOML."""
+"""System files: star, planet, priors and thresholds of one target, in TOML."""
 
 from __future__ import annotations
 
@@ -6,14 +6,16 @@ import difflib
 import math
 import os
 import re
-import tempfile
 import tomllib
 from dataclasses import fields
 from pathlib import Path
 
 from transit.atmosphere import BACKGROUNDS, equilibrium_temperature_k, gravity_m_s2
-from transit.errors import OutputError, SystemFileError
+from transit.errors import SystemFileError
 from transit.records import Priors, System
+from transit.system_priors import SPECIES_PRIOR, is_number, priors_from, thresholds_from
+from transit.system_template import write_new_system
+from transit.thresholds import Thresholds
 from transit.units import (
     ASTRONOMICAL_UNIT_M,
     EARTH_MASS_KG,
@@ -22,6 +24,8 @@ from transit.units import (
     JUPITER_RADIUS_M,
     SOLAR_RADIUS_M,
 )
+
+__all__ = ["read_system", "write_new_system"]
 
 # Ranges outside which a value is a slip of the unit or the decimal point rather than an unusual planet.
 _STAR_RANGES = {
@@ -40,14 +44,7 @@ _PLANET_RANGES = {
 }
 _GRAVITY_RANGE_M_S2 = (0.5, 2000.0)
 _MAX_BYTES = 1_000_000
-_SPECIES_PRIOR = "log10_vmr_"
-_PAIR_PRIORS = tuple(
-    f.name
-    for f in fields(Priors)
-    if f.name != "log10_vmr_species" and (isinstance(f.default, tuple) or f.name == "temperature_k")
-)
-_POSITIVE_PRIORS = ("temperature_teq", "temperature_k", "error_factor")
-_ABUNDANCE_PRIORS = ("log10_vmr",)
+_TABLES = ("star", "planet", "priors", "thresholds")
 
 
 def read_system(path) -> System:
@@ -56,7 +53,7 @@ def read_system(path) -> System:
     Parameters
     ----------
     path : str or path-like
-        TOML with the tables `[star]`, `[planet]` and, optionally, `[priors]`.
+        TOML with the tables `[star]`, `[planet]` and, optionally, `[priors]` and `[thresholds]`.
 
     Returns
     -------
@@ -112,10 +109,11 @@ def read_system(path) -> System:
         semi_major_axis_au=values.get("planet.semi_major_axis_au"),
         period_d=values.get("planet.period_d"),
         background=_background(planet, shown),
-        priors=_priors(tree.get("priors", {}), shown),
+        priors=priors_from(tree.get("priors", {}), shown),
         errors=tuple((_FIELD_OF_KEY[key], error) for key, error in errors.items()),
         source=Path(shown).name,
         notes=tuple(notes),
+        thresholds=thresholds_from(tree.get("thresholds", {}), shown),
     )
 
 
@@ -181,18 +179,19 @@ def _syntax_error(message: str, text: str, shown: str) -> SystemFileError:
 
 def _known_keys(table: str) -> list[str]:
     if table == "priors":
-        return [*(f.name for f in fields(Priors) if f.name != "log10_vmr_species"), _SPECIES_PRIOR + "H2O"]
+        return [*(f.name for f in fields(Priors) if f.name != "log10_vmr_species"), SPECIES_PRIOR + "H2O"]
+    if table == "thresholds":
+        return [f.name for f in fields(Thresholds)]
     ranges = _STAR_RANGES if table == "star" else _PLANET_RANGES
     texts = [] if table == "star" else ["name", "background"]
     return [*ranges, *texts, *(f"{key}_err" for key in ranges)]
 
 
 def _check_keys(tree: dict, shown: str) -> None:
-    tables = ("star", "planet", "priors")
     for key, value in tree.items():
-        if key not in tables:
-            homes = [t for t in tables if key in _known_keys(t)]
-            advice = f"It belongs under [{homes[0]}]." if homes else _nearest(key, tables)
+        if key not in _TABLES:
+            homes = [t for t in _TABLES if key in _known_keys(t)]
+            advice = f"It belongs under [{homes[0]}]." if homes else _nearest(key, _TABLES)
             raise SystemFileError(f"Unknown key {key!r} at the top level. {advice}", shown)
         if not isinstance(value, dict):
             raise SystemFileError(f"{key} is {value!r}, expected a table that begins with [{key}].", shown)
@@ -201,13 +200,13 @@ def _check_keys(tree: dict, shown: str) -> None:
             raise SystemFileError(
                 f"The table [{table}] is missing; add it with the radius of the {table}.", shown
             )
-    for table in tables:
+    for table in _TABLES:
         known = _known_keys(table)
         for key in tree.get(table, {}):
-            species = table == "priors" and re.fullmatch(_SPECIES_PRIOR + r"[A-Z][A-Za-z0-9]*", key)
+            species = table == "priors" and re.fullmatch(SPECIES_PRIOR + r"[A-Z][A-Za-z0-9]*", key)
             if key in known or species:
                 continue
-            homes = [t for t in tables if t != table and key in _known_keys(t)]
+            homes = [t for t in _TABLES if t != table and key in _known_keys(t)]
             advice = f"It belongs under [{homes[0]}]." if homes else _nearest(key, known)
             raise SystemFileError(f"Unknown key {key!r} in [{table}]. {advice}", shown)
 
@@ -221,14 +220,10 @@ def _nearest(key: str, known) -> str:
 # --- values -----------------------------------------------------------------------------------------------
 
 
-def _is_number(value) -> bool:
-    return isinstance(value, (int, float)) and not isinstance(value, bool) and math.isfinite(value)
-
-
 def _number(table: dict, name: str, key: str, allowed: tuple[float, float], shown: str) -> float:
     value = table[key]
     low, high = allowed
-    if not _is_number(value):
+    if not is_number(value):
         raise SystemFileError(
             f"[{name}] {key} is {value!r}, expected a finite number without quotes, {low:g} to {high:g}.",
             shown,
@@ -248,7 +243,7 @@ def _errors(tree: dict, values: dict[str, float], shown: str) -> dict[str, float
             if f"{key}_err" not in tree[table]:
                 continue
             error = tree[table][f"{key}_err"]
-            if not _is_number(error) or error <= 0:
+            if not is_number(error) or error <= 0:
                 raise SystemFileError(f"[{table}] {key}_err is {error!r}, expected a positive number.", shown)
             if f"{table}.{key}" not in values:
                 raise SystemFileError(f"[{table}] {key}_err is given without {key}; add {key} too.", shown)
@@ -352,144 +347,3 @@ def _background(planet: dict, shown: str) -> str:
             shown,
         )
     return background
-
-
-# --- priors -----------------------------------------------------------------------------------------------
-
-
-def _priors(table: dict, shown: str) -> Priors:
-    chosen: dict = {}
-    species = []
-    for key, value in table.items():
-        if key in _PAIR_PRIORS:
-            chosen[key] = _pair(key, value, shown)
-        elif key.startswith(_SPECIES_PRIOR):
-            species.append((key.removeprefix(_SPECIES_PRIOR), *_pair(key, value, shown)))
-        else:
-            chosen[key] = _positive(key, value, shown)
-    if "temperature_k" in chosen and "temperature_teq" in chosen:
-        raise SystemFileError(
-            "[priors] temperature_k and temperature_teq are both given; keep one of them.", shown
-        )
-    if chosen.get("radius_fraction", 0.1) > 0.5:
-        raise SystemFileError(
-            f"[priors] radius_fraction is {chosen['radius_fraction']:g}, expected more than 0 and at most "
-            "0.5.",
-            shown,
-        )
-    return Priors(**chosen, log10_vmr_species=tuple(sorted(species)))
-
-
-def _pair(key: str, value, shown: str) -> tuple[float, float]:
-    if not isinstance(value, list) or len(value) != 2 or not all(_is_number(v) for v in value):
-        raise SystemFileError(
-            f"[priors] {key} is {value!r}, expected two finite numbers [lower, upper].", shown
-        )
-    low, high = (float(v) for v in value)
-    if low >= high:
-        raise SystemFileError(
-            f"[priors] {key} is {value!r}, expected the lower bound before and below the upper one.", shown
-        )
-    if key in _POSITIVE_PRIORS and low <= 0:
-        raise SystemFileError(f"[priors] {key} is {value!r}, expected positive bounds.", shown)
-    if (key in _ABUNDANCE_PRIORS or key.startswith(_SPECIES_PRIOR)) and high > 0:
-        raise SystemFileError(
-            f"[priors] {key} is {value!r}, expected an upper bound of at most 0, where the gas is pure.",
-            shown,
-        )
-    return low, high
-
-
-def _positive(key: str, value, shown: str) -> float:
-    if not _is_number(value) or value <= 0:
-        raise SystemFileError(f"[priors] {key} is {value!r}, expected a positive number.", shown)
-    return float(value)
-
-
-# --- template ---------------------------------------------------------------------------------------------
-
-
-def _template() -> str:
-    defaults = Priors()
-    lines = [f"# {name} = {_toml_default(getattr(defaults, name))}" for name in _template_priors()]
-    priors = "\n".join(lines)
-    return f"""\
-# System file of leadline: star, planet and priors of one target.
-# The planet and the star below are invented. Replace the numbers; lines that begin with # are optional.
-# Any number of [star] and [planet] may have a 1-sigma error beside it: NAME_err.
-
-[star]
-radius_rsun = 0.87          # radius, solar radii
-# radius_rsun_err = 0.02
-# teff_k = 5240.0           # effective temperature, K
-# j_mag = 9.6               # J magnitude
-
-[planet]
-name = "Invented-1 b"
-radius_rjup = 1.02          # radius, Jupiter's equatorial radii; or: radius_rearth
-# radius_rjup_err = 0.03
-mass_mjup = 0.41            # mass, Jupiter masses; or: mass_mearth
-# mass_mjup_err = 0.03
-equilibrium_temperature_k = 1060.0   # K; without it: computed from teff_k and semi_major_axis_au
-# semi_major_axis_au = 0.049
-# period_d = 4.12
-# background = "H2/He"      # main gas: "H2/He", "N2", "CO2" or "H2O"
-
-[priors]
-# Ranges of the uniform priors, [lower, upper]; the values shown are the defaults.
-{priors}
-# temperature_k = [500.0, 1300.0]      # replaces temperature_teq
-# log10_vmr_H2O = [-8.0, -2.0]         # range of one gas in place of log10_vmr
-"""
-
-
-def _template_priors() -> list[str]:
-    return [f.name for f in fields(Priors) if f.name not in ("temperature_k", "log10_vmr_species")]
-
-
-def _toml_default(value) -> str:
-    return f"[{value[0]}, {value[1]}]" if isinstance(value, tuple) else str(value)
-
-
-def write_new_system(path, force: bool = False) -> Path:
-    """Write a commented template of a system file, of an invented planet, which `read_system` accepts.
-
-    Parameters
-    ----------
-    path : str or path-like
-        File to write.
-    force : bool
-        Replace a file that is already there.
-
-    Returns
-    -------
-    Path
-        The file written.
-
-    Raises
-    ------
-    OutputError
-        If the file is already there and `force` is False, or it cannot be written.
-    """
-    target = Path(path)
-    if target.is_dir():
-        raise OutputError(f"{target} is a directory, expected the name of a file to write.")
-    if target.exists() and not force:
-        raise OutputError(f"{target} is already there; choose another name, or replace it with --force.")
-    temporary = None
-    try:
-        # Written beside the target and renamed, so that an interruption leaves no half file.
-        handle, temporary = tempfile.mkstemp(dir=target.parent, prefix=f".{target.name}.")
-        with os.fdopen(handle, "w", encoding="utf-8") as stream:
-            stream.write(_template())
-        umask = os.umask(0)
-        os.umask(umask)
-        os.chmod(temporary, 0o666 & ~umask)  # mkstemp gives 0600, unlike every other file the user writes
-        os.replace(temporary, target)
-        temporary = None
-    except OSError as error:
-        raise OutputError(f"{target} cannot be written ({error.strerror}); check the directory.") from error
-    finally:
-        if temporary is not None:
-            Path(temporary).unlink(missing_ok=True)
-    return target

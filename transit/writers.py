@@ -20,11 +20,11 @@ import numpy as np
 from transit import __version__
 from transit.errors import OutputError
 from transit.figures import check_figure
-from transit.records import CheckResult, Comparison, Fit, Interval
+from transit.records import CheckResult, Comparison, FalseAlarms, Fit, Interval, Rival
 from transit.report import summary
 from transit.units import PPM
 
-FORMAT = "leadline-check-1"
+FORMAT = "leadline-check-2"
 # result.json is moved into place last: where it is, the set is complete.
 FILE_NAMES = ("summary.txt", "figure.png", "figure.pdf", "draws.npz", "timing.json", "result.json")
 PACKAGES = ("numpy", "scipy", "astropy", "emcee", "pandas", "matplotlib", "click")
@@ -41,8 +41,9 @@ def result_document(result: CheckResult) -> dict:
     Returns
     -------
     dict
-        Keys `format`, `program`, `spectrum`, `system`, `settings`, `hypotheses`, `comparisons`, `verdict`,
-        `warnings`. Numbers that are not finite become None.
+        Keys `format`, `program`, `spectrum`, `system`, `settings`, `hypotheses`, `comparisons`, `rivals`,
+        `with_star`, `false_alarms` (None where not simulated), `sensitivity`, `verdict`, `warnings`. Numbers that
+        are not finite become None.
     """
     spectrum = result.spectrum
     grown = {fit.name: fit for fit in result.inflated}
@@ -62,9 +63,13 @@ def result_document(result: CheckResult) -> dict:
             "notes": spectrum.notes,
         },
         "system": asdict(result.system) | {"errors": dict(result.system.errors)} | derived,
-        "settings": result.settings,
+        "settings": result.settings | {"thresholds": asdict(result.system.thresholds)},
         "hypotheses": [_hypothesis(fit, grown.get(fit.name)) for fit in result.fits],
         "comparisons": [_comparison(comparison) for comparison in result.comparisons],
+        "rivals": [_rival(rival) for rival in result.rivals],
+        "with_star": [_hypothesis(fit, None) for fit in result.with_star],
+        "false_alarms": None if result.false_alarms is None else _false_alarms(result.false_alarms),
+        "sensitivity": {species: asdict(found) for species, found in result.sensitivity.items()},
         "verdict": asdict(result.verdict),
         "warnings": result.warnings,
     }
@@ -178,7 +183,7 @@ def _write_files(result: CheckResult, folder: Path) -> None:
 
 def _draws(result: CheckResult) -> dict[str, np.ndarray]:
     arrays = {}
-    for fits, suffix in ((result.fits, ""), (result.inflated, ".inflated")):
+    for fits, suffix in ((result.fits, ""), (result.inflated, ".inflated"), (result.with_star, "")):
         for fit in fits:
             arrays[f"{fit.name}{suffix}"] = np.asarray(fit.draws, float)
             arrays[f"{fit.name}{suffix}.names"] = np.array(fit.draw_names, dtype=np.str_)
@@ -240,6 +245,43 @@ def _comparison(comparison: Comparison) -> dict:
         "ln_bayes_factor_inflated": comparison.ln_bayes_factor_inflated,
         "ln_bayes_factor_inflated_err": comparison.ln_bayes_factor_inflated_err,
         "delta_chi2": comparison.delta_chi2,
+        "p_named": comparison.p_named,
+        "p_best_of_n": comparison.p_best_of_n,
+        "p_err": comparison.p_err,
+        "p_null": comparison.p_null,
+        "counts": comparison.counts,
+    }
+
+
+def _rival(rival: Rival) -> dict:
+    return {
+        "name": rival.name,
+        "base": rival.base,
+        "species": rival.species,
+        "ln_evidence": rival.ln_evidence,
+        "ln_evidence_err": rival.ln_evidence_err,
+        "ln_evidence_inflated": rival.ln_evidence_inflated,
+        "ln_evidence_inflated_err": rival.ln_evidence_inflated_err,
+        "phrase": rival.phrase,
+        "chi2": rival.chi2,
+        "counts": rival.counts,
+        "parameters": {name: asdict(interval) for name, interval in rival.parameters.items()},
+    }
+
+
+def _false_alarms(found: FalseAlarms) -> dict:
+    return {
+        "n_simulations": found.n_simulations,
+        "error_factor": found.error_factor,
+        "smallest_p": found.smallest_p,
+        "ln_bayes_factor": found.ln_bayes_factor,
+        "p_named": found.p_named,
+        "p_named_err": found.p_named_err,
+        "p_best_of_n": found.p_best_of_n,
+        "p_best_of_n_err": found.p_best_of_n_err,
+        # A name of its own in place of the empty one: the best of all species.
+        "observed": {species or "best": values for species, values in found.observed.items()},
+        "left_out": found.left_out,
     }
 
 

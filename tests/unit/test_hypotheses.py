@@ -6,7 +6,7 @@ from transit.errors import SettingError
 from transit.hypotheses import (
     DECK_COORDINATE,
     Hypothesis,
-    limb_state,
+    columns, limb_state, noise_values,
     parameters,
     physical,
     sampled_hypotheses,
@@ -86,7 +86,8 @@ def test_background_gas_has_no_free_abundance():
     hypothesis = Hypothesis("all", ("H2O", "CO2"))
     found = parameters(hypothesis, Priors(), RANGE_K, "H2O")
     assert [p.name for p in found][4:] == ["log10_vmr_CO2"]
-    state, _ = limb_state(np.array([[900.0, -1.0, 0.0, -4.0, -1.0]]), found, hypothesis, "H2O")
+    values = columns(np.array([[900.0, -1.0, 0.0, -4.0, -1.0]]), found)
+    state = limb_state(values, hypothesis, "H2O", 1)
     assert state.vmr[0] == pytest.approx([0.9, 0.1])
 
 
@@ -133,7 +134,10 @@ def test_state_of_the_limb():
     hypothesis = Hypothesis("all", ("H2O", "CO"))
     found = parameters(hypothesis, Priors(), RANGE_K, "H2/He", inflate=True)
     values = np.array([[900.0, -2.0, 3.0, -4.0, -3.0, -5.0, np.log(1.5)]])
-    state, factor = limb_state(values, found, hypothesis, "H2/He")
+    column = columns(values, found)
+    state = limb_state(column, hypothesis, "H2/He", 1)
+    factor, ar1 = noise_values(column)
+    assert ar1 is None
     assert state.temperature_k == pytest.approx([900.0])
     assert np.exp(state.ln_deck_pressure_bar) == pytest.approx([0.01])
     assert np.exp(state.ln_haze_strength) == pytest.approx([1000.0])
@@ -145,5 +149,4 @@ def test_state_of_the_limb():
 def test_state_without_inflation_has_factor_one():
     """Quoted errors are used as they are."""
     found = parameters(WATER, Priors(), RANGE_K, "H2/He")
-    _, factor = limb_state(physical(np.zeros((4, 5)), found), found, WATER, "H2/He")
-    assert factor == 1.0
+    assert noise_values(columns(physical(np.zeros((4, 5)), found), found)) == (1.0, None)

@@ -2,7 +2,10 @@
 
 from __future__ import annotations
 
+import dataclasses
+import re
 import stat
+from pathlib import Path
 
 import pytest
 from hypothesis import HealthCheck, given, settings
@@ -11,6 +14,7 @@ from hypothesis import strategies as st
 from transit.errors import OutputError, SystemFileError
 from transit.records import Priors, System
 from transit.system import read_system, write_new_system
+from transit.thresholds import Thresholds, source_of
 
 STAR = {"radius_rsun": "0.918"}
 PLANET = {"radius_rjup": "1.332", "mass_mjup": "0.28", "equilibrium_temperature_k": "1166"}
@@ -20,11 +24,12 @@ PLANET = {"radius_rjup": "1.332", "mass_mjup": "0.28", "equilibrium_temperature_
 def read(tmp_path):
     """Write `[star]`, `[planet]` and `[priors]` from dictionaries of TOML values, and read the file."""
 
-    def write_and_read(star=None, planet=None, priors=None, without=()):
+    def write_and_read(star=None, planet=None, priors=None, without=(), thresholds=None):
         tables = {
             "star": {**STAR, **(star or {})},
             "planet": {**PLANET, **(planet or {})},
             "priors": priors or {},
+            "thresholds": thresholds or {},
         }
         text = ""
         for name, values in tables.items():
@@ -110,6 +115,39 @@ class TestAccepted:
             offset_ppm=50.0,
         )
 
+    def test_priors_of_rivals_and_of_what_may_vary(self, read):
+        priors = read(
+            priors={
+                "step_ppm": "200",
+                "outlier_ppm": "400.0",
+                "bump_scale_heights": "5",
+                "spot_fraction": "[0, 0.3]",
+                "spot_contrast_k": "[-900, -100]",
+                "facula_fraction": "[0.1, 1]",
+                "facula_contrast_k": "[0, 200]",
+                "cloud_fraction": "[0.2, 0.8]",
+                "ar1_coefficient": "[0, 0.99]",
+            }
+        ).priors
+        assert priors == Priors(
+            step_ppm=200.0,
+            outlier_ppm=400.0,
+            bump_scale_heights=5.0,
+            spot_fraction=(0.0, 0.3),
+            spot_contrast_k=(-900.0, -100.0),
+            facula_fraction=(0.1, 1.0),
+            facula_contrast_k=(0.0, 200.0),
+            cloud_fraction=(0.2, 0.8),
+            ar1_coefficient=(0.0, 0.99),
+        )
+
+    def test_thresholds(self, read):
+        assert read().thresholds == Thresholds()
+        thresholds = read(
+            thresholds={"present_ln_b": "6", "hint_ln_b": "3.5", "poor_fit_p": "0.01"}
+        ).thresholds
+        assert thresholds == Thresholds(present_ln_b=6.0, hint_ln_b=3.5, poor_fit_p=0.01)
+
     def test_byte_order_mark_and_windows_line_ends(self, tmp_path):
         text = "[star]\r\nradius_rsun = 0.9\r\n[planet]\r\n" + "".join(
             f"{k} = {v}\r\n" for k, v in PLANET.items()
@@ -128,6 +166,13 @@ class TestRefusedKeys:
             ("priors", "temperature", "Unknown key 'temperature' in [priors]. Did you mean 'temperature_"),
             ("priors", "log10_vmr_species", "Unknown key 'log10_vmr_species' in [priors]"),
             ("priors", "log10_vmr_h2o", "Did you mean 'log10_vmr_H2O'?"),
+            ("priors", "spot_fracton", "Did you mean 'spot_fraction'?"),
+            (
+                "thresholds",
+                "present_lnb",
+                "Unknown key 'present_lnb' in [thresholds]. Did you mean 'present_ln_b'?",
+            ),
+            ("priors", "hint_ln_b", "It belongs under [thresholds]."),
         ],
     )
     def test_unknown(self, refused, table, key, said):
@@ -251,6 +296,51 @@ class TestRefusedValues:
         assert f"[priors] {key} is " in message
         assert said in message
 
+    @pytest.mark.parametrize(
+        ("key", "value", "said"),
+        [
+            ("step_ppm", "0", "expected a positive number"),
+            ("outlier_ppm", "[0, 500]", "expected a positive number"),
+            ("bump_scale_heights", "-3", "expected a positive number"),
+            ("spot_fraction", "[0, 1.2]", "expected bounds from 0 to 1"),
+            ("facula_fraction", "[-0.1, 0.5]", "expected bounds from 0 to 1"),
+            ("cloud_fraction", "0.5", "expected two finite numbers"),
+            ("spot_contrast_k", "[-500, 100]", "expected bounds from -5000 to 0"),
+            ("facula_contrast_k", "[-100, 300]", "expected bounds from 0 to 5000"),
+            ("ar1_coefficient", "[0, 1]", "expected bounds from 0 to 0.99"),
+            ("ar1_coefficient", "[-0.5, 0.5]", "expected bounds from 0 to 0.99"),
+            ("ar1_coefficient", "[0.5, 0.5]", "expected the lower bound before and below"),
+        ],
+    )
+    def test_priors_of_rivals(self, refused, key, value, said):
+        message = refused(priors={key: value})
+        assert f"[priors] {key} is " in message
+        assert said in message
+
+    @pytest.mark.parametrize(
+        ("key", "value", "said"),
+        [
+            ("present_ln_b", '"5"', "expected a finite number from 0 to 100"),
+            ("present_ln_b", "true", "expected a finite number from 0 to 100"),
+            ("present_ln_b", "nan", "expected a finite number from 0 to 100"),
+            ("present_ln_b", "inf", "expected a finite number from 0 to 100"),
+            ("present_ln_b", "[5, 6]", "expected a finite number from 0 to 100"),
+            ("present_ln_b", "2.4", "below hint_ln_b (2.5)"),
+            ("hint_ln_b", "-0.1", "expected a finite number from 0 to 100"),
+            ("poor_fit_p", "1.1", "expected a finite number from 0 to 1"),
+            ("sensitivity_chance", "1", "expected a finite number from 0.01 to 0.99"),
+            ("sensitivity_scale_heights", "0", "expected a finite number from 0.1 to 100"),
+        ],
+    )
+    def test_thresholds(self, refused, key, value, said):
+        message = refused(thresholds={key: value})
+        assert message.startswith(
+            "target.toml: [thresholds] present_ln_b"
+            if "hint_ln_b (" in said
+            else f"target.toml: [thresholds] {key} is "
+        )
+        assert said in message
+
     def test_two_temperature_priors(self, refused):
         priors = {"temperature_k": "[500, 900]", "temperature_teq": "[0.5, 1.2]"}
         assert "temperature_k and temperature_teq are both given" in refused(priors=priors)
@@ -299,9 +389,15 @@ class TestTemplate:
         ]
         system = read_text(tmp_path, "\n".join(lines))
         assert system.star_teff_k is not None
+        assert system.thresholds == Thresholds()
         assert system.priors == Priors(
             temperature_k=(500.0, 1300.0), log10_vmr_species=(("H2O", -8.0, -2.0),)
         )
+
+    def test_names_every_threshold(self, tmp_path):
+        text = write_new_system(tmp_path / "new.toml").read_text()
+        for field in dataclasses.fields(Thresholds):
+            assert f"# {field.name} = {field.default}\n" in text
 
     def test_invented_numbers_agree_with_each_other(self, tmp_path):
         text = write_new_system(tmp_path / "new.toml").read_text()
@@ -330,6 +426,14 @@ class TestTemplate:
             write_new_system(tmp_path)
         with pytest.raises(OutputError, match="cannot be written"):
             write_new_system(tmp_path / "none" / "new.toml")
+
+
+def test_documented_thresholds_are_those_of_the_program():
+    text = (Path(__file__).parents[2] / "docs/method.md").read_text()
+    rows = re.findall(r"^\| `(\w+)` \| ([-\d.e]+) \| [^|]+ \| ([^|]+) \|$", text, re.MULTILINE)
+    documented = {name: (float(value), source) for name, value, source in rows}
+    actual = {f.name: (f.default, source_of(f.name)) for f in dataclasses.fields(Thresholds)}
+    assert documented == actual
 
 
 _SETTINGS = settings(

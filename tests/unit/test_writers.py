@@ -4,11 +4,20 @@ import os
 
 import numpy as np
 import pytest
-from synthetic import check_result, spectrum_record
+from synthetic import (
+    LN_EVIDENCE_LEVEL,
+    check_result,
+    false_alarms_record,
+    fit_record,
+    rival_record,
+    sensitivity_record,
+    spectrum_record,
+)
 
 from transit import writers
 from transit.errors import OutputError
 from transit.report import summary
+from transit.thresholds import Thresholds
 from transit.writers import FILE_NAMES, check_output_dir, result_document, write_result
 
 TOP_KEYS = [
@@ -19,6 +28,10 @@ TOP_KEYS = [
     "settings",
     "hypotheses",
     "comparisons",
+    "rivals",
+    "with_star",
+    "false_alarms",
+    "sensitivity",
     "verdict",
     "warnings",
 ]
@@ -48,7 +61,7 @@ def names_in(folder):
 def test_document_has_the_agreed_names():
     document = result_document(check_result(("H2O", "CO2")))
     assert list(document) == TOP_KEYS
-    assert document["format"] == "leadline-check-1"
+    assert document["format"] == "leadline-check-2"
     assert set(document["program"]) == {"name", "version", "python", "packages"}
     assert set(document["spectrum"]) == {
         "file",
@@ -90,6 +103,67 @@ def test_inflated_fits_only_where_there_are_some():
     entry = result_document(check_result(ln_evidences_inflated={"H2O": 3.0}))["hypotheses"][3]
     assert entry["inflated"]["ln_evidence"] == pytest.approx(203.0)
     assert entry["inflated"]["error_factor"] == {"median": 1.4, "lower": 1.2, "upper": 1.7}
+
+
+def result_with_everything():
+    return check_result(
+        ("H2O", "CO2"),
+        ln_evidences_inflated={"H2O": 6.0},
+        rivals=(
+            rival_record("star", LN_EVIDENCE_LEVEL + 1.0, LN_EVIDENCE_LEVEL + 0.5, chi2=33.0),
+            rival_record("bump", LN_EVIDENCE_LEVEL, counts={"H2O": False, "CO2": True}),
+            rival_record("one-bin", LN_EVIDENCE_LEVEL, species="CO2"),
+        ),
+        false_alarms=false_alarms_record({"H2O": 1e-3, "CO2": 0.2}, 2e-3, {"H2O": 0.03}),
+        sensitivity={"H2O": sensitivity_record(1.2), "CO2": sensitivity_record(None)},
+        thresholds=Thresholds(hint_ln_b=3.0),
+    )
+
+
+def test_rivals_chances_and_sensitivity_are_written():
+    document = result_document(result_with_everything())
+    assert list(document) == TOP_KEYS
+    assert document["settings"]["thresholds"]["hint_ln_b"] == 3.0
+    star, bump, one_bin = document["rivals"]
+    assert (star["name"], star["base"], star["species"]) == ("star", "null", None)
+    assert star["ln_evidence_inflated"] == pytest.approx(LN_EVIDENCE_LEVEL + 0.5)
+    assert star["parameters"]["amplitude_ppm"]["unit"] == "ppm"
+    assert bump["counts"] == {"H2O": False, "CO2": True}
+    assert (one_bin["base"], one_bin["ln_evidence_inflated"]) == ("all-CO2", None)
+    assert document["sensitivity"]["H2O"]["amplitude_scale_heights"] == 1.2
+    assert document["sensitivity"]["CO2"]["amplitude_scale_heights"] is None
+    alarms = document["false_alarms"]
+    assert len(alarms["p_best_of_n"]) == len(alarms["ln_bayes_factor"]) == len(alarms["p_named"]["H2O"])
+    assert set(alarms["observed"]) == {"H2O", "CO2", "best"}
+    assert alarms["left_out"]["H2O"]["p_named"] == 0.03
+
+
+def test_comparisons_hold_chances_and_rivals():
+    document = result_document(result_with_everything())
+    entries = document["comparisons"]
+    assert [c["kind"] for c in entries] == ["alone"] * 6 + ["left_out"] * 2 + ["feature"] + ["rival"] * 7
+    named = next(c for c in entries if c["kind"] == "alone" and c["species"] == "H2O" and c["best_null"])
+    assert (named["p_named"], named["p_best_of_n"], named["p_null"]["slope"]) == (1e-3, 2e-3, 1e-3)
+    bumps = {c["species"]: c["counts"] for c in entries if c["kind"] == "rival" and c["against"] == "bump"}
+    assert bumps == {"H2O": False, "CO2": True, None: False}
+    without_chi2 = next(c for c in entries if c["against"] == "bump")
+    assert without_chi2["delta_chi2"] is None
+    assert json.loads(json.dumps(document, allow_nan=False)) == document
+
+
+def test_fits_with_a_star_are_written(tmp_path):
+    result = dataclasses.replace(
+        check_result(), with_star=(fit_record("star+H2O", ("H2O",), 209.0, n_bins=28),)
+    )
+    assert [entry["name"] for entry in result_document(result)["with_star"]] == ["star+H2O"]
+    with np.load(write_result(result, tmp_path / "out") / "draws.npz", allow_pickle=False) as draws:
+        assert "star+H2O" in draws.files
+
+
+def test_nothing_simulated_is_null():
+    document = result_document(check_result())
+    assert (document["rivals"], document["false_alarms"], document["sensitivity"]) == ([], None, {})
+    assert {c["p_named"] for c in document["comparisons"]} == {None}
 
 
 def test_what_is_not_finite_becomes_null(tmp_path):

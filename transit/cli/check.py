@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 import shutil
 import sys
 import threading
@@ -33,6 +34,17 @@ def reading_options(command: Callable) -> Callable:
         click.option("--width-column", **column, help="Column to read bin widths from."),
         click.option("--depth-column", **column, help="Column to read depths from."),
         click.option("--error-column", **column, help="Column to read depth errors from."),
+        click.option(
+            "--covariance",
+            metavar="FILE",
+            type=click.Path(path_type=Path),
+            help="Covariance of the depths, N x N in the order of the table's rows: CSV, FITS or .npy.",
+        ),
+        click.option(
+            "--covariance-unit",
+            type=click.Choice(["fraction", "percent", "ppm"]),
+            help="Unit whose square the covariance is in; left out: that of the depth column.",
+        ),
     ]
     for option in reversed(options):
         command = option(command)
@@ -46,6 +58,66 @@ def _split_species(_ctx: click.Context, _param: click.Parameter, text: str | Non
     if not all(names):
         raise click.BadParameter(f"{text!r} holds an empty name, expected names parted by commas: H2O,CO2.")
     return tuple(dict.fromkeys(names))
+
+
+def _split_steps(_ctx: click.Context, _param: click.Parameter, text: str | None) -> tuple[float, ...]:
+    if text is None:
+        return ()
+    try:
+        steps = tuple(float(part) for part in text.split(","))
+    except ValueError:
+        steps = (math.nan,)
+    if not all(math.isfinite(um) and um > 0 for um in steps):
+        raise click.BadParameter(f"{text!r}, expected wavelengths in micrometre parted by commas: 1.2,2.5.")
+    return tuple(sorted(set(steps)))
+
+
+NUISANCES = ("offsets", "steps", "slope", "inflation", "ar1")
+
+
+def _split_nuisances(_ctx: click.Context, _param: click.Parameter, text: str) -> tuple[str, ...]:
+    names = [name.strip() for name in text.split(",")]
+    if names == ["none"]:
+        return ()
+    for name in names:
+        if name not in NUISANCES:
+            raise click.BadParameter(
+                f"{name!r} is unknown, expected some of {', '.join(NUISANCES)} parted by commas, or none."
+            )
+    return tuple(dict.fromkeys(names))
+
+
+def hypothesis_options(command: Callable) -> Callable:
+    """Add the options that say what the hypotheses and their rivals may contain."""
+    options = [
+        click.option(
+            "--step",
+            "step_um",
+            metavar="UM,...",
+            callback=_split_steps,
+            help="Wavelengths (um) where a detector or order may step: tested as a rival explanation.",
+        ),
+        click.option(
+            "--nuisance",
+            "nuisances",
+            metavar="NAME,...",
+            default="offsets",
+            show_default=True,
+            callback=_split_nuisances,
+            help="What every hypothesis alike may vary: offsets of segments, steps at --step, a slope, inflation "
+            "of the errors, ar1 noise along wavelength; or none.",
+        ),
+        click.option("--patchy", is_flag=True, help="Let the cloud deck cover a part of the limb only."),
+        click.option(
+            "--star-spectra",
+            metavar="FILE",
+            type=click.Path(path_type=Path),
+            help="Your own spectra of the star by temperature, in place of the shipped ones.",
+        ),
+    ]
+    for option in reversed(options):
+        command = option(command)
+    return command
 
 
 @click.command(short_help="Tell whether a spectrum holds a feature, and whose.")
@@ -68,6 +140,11 @@ def _split_species(_ctx: click.Context, _param: click.Parameter, text: str | Non
 @click.option("--workers", type=click.IntRange(min=1), default=2, show_default=True, help="Processes to use.")
 @click.option("--quick", is_flag=True, help="Fewer draws: rougher, for a first look only.")
 @click.option(
+    "--sensitivity-only",
+    is_flag=True,
+    help="Tell what the spectrum could show, from its bins, errors and priors, and stop.",
+)
+@click.option(
     "--out",
     "out_dir",
     metavar="DIR",
@@ -75,6 +152,7 @@ def _split_species(_ctx: click.Context, _param: click.Parameter, text: str | Non
     help="Directory for result.json, the summary, the figure and the posterior draws.",
 )
 @click.option("--force", is_flag=True, help="Replace an earlier result in DIR.")
+@hypothesis_options
 @reading_options
 def check(
     spectrum_file: Path,
@@ -83,8 +161,13 @@ def check(
     seed: int,
     workers: int,
     quick: bool,
+    sensitivity_only: bool,
     out_dir: Path | None,
     force: bool,
+    step_um: tuple[float, ...],
+    nuisances: tuple[str, ...],
+    patchy: bool,
+    star_spectra: Path | None,
     **reading: str | None,
 ) -> None:
     """Tell whether a transmission spectrum holds a feature, which absorber explains it, and how surely.
@@ -94,13 +177,21 @@ def check(
 
     \b
     Example:
-      leadline check wasp-96b.csv --system wasp-96.toml --species H2O,CO2 --out wasp-96b
+      leadline check spectrum.csv --system system.toml --species H2O,CO2 --out result
     """
     if force and out_dir is None:
         raise click.UsageError("--force replaces files in the directory of --out, but there is no --out.")
-    from transit.check import check_spectrum
+    if sensitivity_only and out_dir is not None:
+        raise click.UsageError("--sensitivity-only prints a table and writes nothing: leave out --out.")
+    if "steps" in nuisances and not step_um:
+        raise click.UsageError("--nuisance steps needs the wavelengths of the steps: add --step.")
+    from transit.check import check_spectrum, prepare, sensitivity_of
     from transit.readers import ReadOptions, read_depth_table
+    from transit.records import Nuisances
     from transit.report import summary
+    from transit.report_chances import sensitivity_table
+    from transit.rivals import check_steps
+    from transit.star import read_star_spectra
     from transit.system import read_system
     from transit.writers import check_output_dir, write_result
 
@@ -108,11 +199,22 @@ def check(
         check_output_dir(out_dir, force)
     system = read_system(system_file)
     spectrum = read_depth_table(spectrum_file, system=system, options=ReadOptions(**reading))
+    check_steps(spectrum, step_um)
+    chosen = {name: name in nuisances for name in NUISANCES} | {"patchy": patchy, "step_um": step_um}
+    hypotheses = {
+        "species": species,
+        "nuisances": Nuisances(**chosen),
+        "star_spectra": None if star_spectra is None else read_star_spectra(star_spectra),
+    }
+    if sensitivity_only:
+        prepared = prepare(spectrum, system, **hypotheses)
+        _print_text(sensitivity_table(sensitivity_of(prepared, seed), prepared.selection.untested))
+        return
     with ProgressLine() as progress:
         result = check_spectrum(
             spectrum,
             system,
-            species=species,
+            **hypotheses,
             seed=seed,
             workers=workers,
             quick=quick,

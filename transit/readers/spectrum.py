@@ -10,11 +10,14 @@ import numpy as np
 from transit.readers import bins
 from transit.readers.cells import comma_note, is_limit, is_missing, numbers
 from transit.readers.columns import Choice, choose_columns
+from transit.readers.covariance import read_covariance
 from transit.readers.depths import read_depths
 from transit.readers.formats import read_raw
-from transit.readers.options import ReadOptions
+from transit.readers.options import DEPTH_UNITS, ReadOptions
+from transit.readers.quantities import format_number
 from transit.readers.raw import RawTable
 from transit.readers.rows import may_be_same_planet, select_rows
+from transit.readers.settled import settle_unit
 from transit.readers.wavelengths import read_wavelengths
 from transit.records import DepthSpectrum, System
 
@@ -33,18 +36,19 @@ def read_depth_table(
     system : System, optional
         Star and planet: the median depth must agree with their squared radius ratio within a factor of two.
     options : ReadOptions, optional
-        What the table does not say, or says wrongly.
+        What the table does not say, or says wrongly; a covariance of the bins from a file of its own.
 
     Returns
     -------
     DepthSpectrum
-        Sorted by wavelength; micrometre and fractions. `notes` says what was read, left out or odd.
+        Sorted by wavelength; micrometre and fractions. `notes` says what was read, left out or odd. With a
+        covariance, its rows follow the bins and `depth_err` is the square root of its diagonal.
 
     Raises
     ------
     InputFileError
         If the file cannot be read, a cell is not a number, a unit is not stated or contradicts the system, or
-        fewer than three bins are left. Units are never guessed.
+        fewer than three bins are left, or the covariance does not belong to the table. Units are never guessed.
 
     Notes
     -----
@@ -61,12 +65,13 @@ def read_depth_table(
     table, planet, reference = select_rows(raw, options)
     choice = choose_columns(table, options)
     notes = _reading_notes(raw, table, choice, planet, system)
-    table, left_out = _drop_unusable(table, choice)
+    n_rows = table.n_rows
+    table, usable, left_out = _drop_unusable(table, choice)
     notes += left_out + comma_note(table, choice.names())
     segment, segment_names = _segments(table, choice)
     centre_um, half_um, wave_notes = read_wavelengths(table, choice, options, segment)
     depth, depth_err, depth_notes = read_depths(table, choice, options, system)
-    rows = _Bins(centre_um, half_um, depth, depth_err, segment)
+    rows = _Bins(centre_um, half_um, depth, depth_err, segment, np.arange(len(depth)))
     rows, segment_names, order_notes = _sort(rows, segment_names)
     if len(rows.centre_um) < _MIN_BINS:
         raise table.refusal(
@@ -74,6 +79,8 @@ def read_depth_table(
             + " ".join(["", *left_out, *order_notes])
         )
     rows, bin_notes = _finish_bins(rows, segment_names)
+    _refuse_bins_beyond_zero(table, rows)
+    rows, covariance, covariance_notes = _with_covariance(rows, table, choice, options, usable, n_rows)
     source = Path(table.path).name + (f" ({reference})" if reference else "")
     return DepthSpectrum(
         wavelength_um=rows.centre_um,
@@ -82,9 +89,10 @@ def read_depth_table(
         depth_err=rows.depth_err,
         segment=rows.segment,
         segment_names=segment_names,
+        covariance=covariance,
         source=source,
         sha256=sha256,
-        notes=tuple(notes + wave_notes + depth_notes + order_notes + bin_notes),
+        notes=tuple(notes + wave_notes + depth_notes + order_notes + bin_notes + covariance_notes),
     )
 
 
@@ -107,9 +115,10 @@ def _reading_notes(raw: RawTable, table: RawTable, choice: Choice, planet: str, 
     return notes
 
 
-def _drop_unusable(table: RawTable, choice: Choice) -> tuple[RawTable, list[str]]:
+def _drop_unusable(table: RawTable, choice: Choice) -> tuple[RawTable, list[int], list[str]]:
     """Leave out rows without a wavelength, depth or error, and rows that are limits; count them in notes.
 
+    The second item holds the positions of the rows that are left.
     Cells that are not numbers are refused later, and only in the rows that are left.
     """
     needed = [c for c in (choice.value, choice.error, choice.error_minus) if c is not None]
@@ -133,7 +142,7 @@ def _drop_unusable(table: RawTable, choice: Choice) -> tuple[RawTable, list[str]
     notes = [f"{n} {_row_word(n)} without a value in {name} left out." for name, n in missing.items() if n]
     if limits:
         notes.append(f"{limits} {_row_word(limits)} left out as limits, not measurements.")
-    return table.take(keep), notes
+    return table.take(keep), keep, notes
 
 
 def _row_word(count: int) -> str:
@@ -168,13 +177,14 @@ def _segment_text(cell) -> str:
 
 @dataclass(frozen=True, slots=True)
 class _Bins:
-    """The numbers of a spectrum in the making; arrays of shape (N,)."""
+    """The numbers of a spectrum in the making; arrays of shape (N,). `row` is the position in the usable table."""
 
     centre_um: np.ndarray
     half_um: np.ndarray
     depth: np.ndarray
     depth_err: np.ndarray
     segment: np.ndarray
+    row: np.ndarray
 
     def take(self, rows) -> _Bins:
         return _Bins(*(getattr(self, name)[rows] for name in self.__dataclass_fields__))
@@ -223,3 +233,31 @@ def _finish_bins(rows: _Bins, names: tuple[str, ...]) -> tuple[_Bins, list[str]]
     if len(names) > 1:
         notes.append(f"The spectrum has {len(names)} segments that may be offset: {', '.join(names)}.")
     return rows, notes
+
+
+def _refuse_bins_beyond_zero(table: RawTable, rows: _Bins) -> None:
+    """Refuse bins whose lower edge is no wavelength any more: a width in another unit, or between far neighbours."""
+    bad = np.flatnonzero(rows.half_um >= rows.centre_um)
+    if len(bad):
+        centre, half = rows.centre_um[bad[0]], rows.half_um[bad[0]]
+        raise table.refusal(
+            f"The bin at {format_number(centre)} um reaches {format_number(half)} um to either side, expected less "
+            "than its wavelength. Correct the width or its unit; where no width is given, give one.",
+            int(rows.row[bad[0]]),
+        )
+
+
+# --- covariance -------------------------------------------------------------------------------------------
+
+
+def _with_covariance(rows: _Bins, table: RawTable, choice: Choice, options: ReadOptions, usable, n_rows):
+    """Read the covariance, if there is one, and take the errors from its diagonal."""
+    if options.covariance is None:
+        return rows, None, []
+    # The depth column's unit was settled, and its notes written, when the depths were read.
+    stated = settle_unit(table, choice.value, options.depth_unit, DEPTH_UNITS, "--depth-unit", [])
+    unit = options.covariance_unit or stated.unit
+    covariance, notes = read_covariance(
+        options.covariance, usable, n_rows, rows.row, unit, rows.depth, rows.depth_err
+    )
+    return replace(rows, depth_err=np.sqrt(np.diag(covariance))), covariance, notes
