@@ -20,6 +20,14 @@ _HOMES = {
     "Comparison": "transit.records",
     "Verdict": "transit.records",
     "CheckResult": "transit.records",
+    "Nuisances": "transit.records",
+    "Rival": "transit.records",
+    "FalseAlarms": "transit.records",
+    "Sensitivity": "transit.records",
+    "Thresholds": "transit.thresholds",
+    "read_star_spectra": "transit.star",
+    "prepare": "transit.check",
+    "sensitivity_of": "transit.check",
 }
 
 __all__ = ["__version__", *_HOMES]

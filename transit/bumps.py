@@ -13,17 +13,20 @@ from transit.records import DepthSpectrum
 
 # First cells, and when they are fine enough; tests/unit/test_rivals.py measures what halving them does.
 CENTRE_STEP = 0.7  # in widths of the bump
-WIDTH_RATIO = 1.5
+FEWEST_CENTRES = 60  # wide bumps too: without level and slope, little of them is left, and that changes fast
+WIDTH_RATIO = 1.25
 LARGEST_SHARE = 1 / 1000  # of the evidence in one cell: a posterior spread over a thousand cells is resolved
-# Share of ln B that the middle of a first cell may lose to the best place in it: 0.1 at a corner, with room.
-MISPLACED_LOSS = 0.2
+# Neighbours of a sharp peak: all cells may lose this share of the highest ln B by their middle being beside it. It is
+# counted from the second number on, below which no peak is sharp. Smaller shares miss peaks about bases with several
+# free directions.
+MISPLACED_LOSS = 1.0
+SHARP_FROM_LN_B = 5.0
 MOST_HALVINGS = 16
 CELLS_AT_ONCE = 2048
 LARGEST_WIDTH_SHARE = 1 / 3  # of the spectrum's span in ln wavelength
 BLIND_WIDTH = 1e-6  # largest height over its error below which the data say nothing of a bump
-NODES = (
-    np.arange(20) + 0.5
-) / 20  # probabilities at which the posterior of the height in a cell is written down
+# Probabilities at which the posterior of the height in a cell is written down.
+NODES = (np.arange(21) + 0.5) / 21
 
 
 @dataclass(frozen=True, eq=False)
@@ -108,7 +111,7 @@ def bump_cells(spectrum: DepthSpectrum, fineness: float = 1.0) -> BumpCells:
     half_width = np.log(widest / narrowest) / n_widths / 2
     parts = []
     for ln_width in np.log(narrowest) + half_width * (2 * np.arange(n_widths) + 1):
-        n = int(np.ceil(span / (CENTRE_STEP * np.exp(ln_width)) * fineness))
+        n = int(np.ceil(max(span / (CENTRE_STEP * np.exp(ln_width)), FEWEST_CENTRES) * fineness))
         half = span / n / 2
         middle = start + half * (2 * np.arange(n) + 1)
         constants = (ln_width, half, half_width, -np.log(n * n_widths))
@@ -216,7 +219,7 @@ def find_bump(
         total = float(logsumexp(ln_mass))
         # The heaviest middle need not be in the cell of a sharp peak. What a middle may lose falls with the square of
         # the cells' size, so that at first many neighbours are halved too.
-        margin = MISPLACED_LOSS * 4.0**-halving * max(float(gains.max()), 0.0)
+        margin = MISPLACED_LOSS * 4.0**-halving * max(float(gains.max()) - SHARP_FROM_LN_B, 0.0)
         heavy = ln_mass > total + np.log(LARGEST_SHARE / fineness**2) - margin
         if halving == MOST_HALVINGS or np.all(ln_mass <= total + np.log(LARGEST_SHARE / fineness**2)):
             break

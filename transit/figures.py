@@ -12,7 +12,7 @@ from matplotlib.ticker import FixedLocator, FuncFormatter, MaxNLocator, NullForm
 
 from transit.records import CheckResult, Fit, offset_name
 from transit.units import PPM
-from transit.verdict import STANDS_FROM, best_model, best_null
+from transit.verdict import best_model, best_null
 
 LOG_AXIS_FROM_RATIO = 2.5
 
@@ -23,7 +23,7 @@ _SECOND = {"color": "#d9791e", "linestyle": (0, (5, 1.6)), "linewidth": 1.6}
 _NULL = {"color": "#74787d", "linestyle": (0, (1.2, 1.4)), "linewidth": 1.9}
 _BAND_ALPHA = {"best": 0.20, "null": 0.22}
 _MARKERS = "osD^vPX"
-_WORD_SHADES = {"present": "#12307a", "hint": "#4f6fb8", "interchangeable": "#d9791e"}
+_WORD_SHADES = {"present": "#12307a", "hint": "#4f6fb8", "interchangeable": "#d9791e", "confounded": "#a33b20"}
 _QUIET_SHADE = "#a9adb2"
 _WORD_BAR_POINTS, _QUIET_BAR_POINTS = 6.5, 3.0
 _CROWDED_FROM_BINS = 120
@@ -85,7 +85,7 @@ def _models_to_draw(result: CheckResult) -> list[tuple[Fit, str]]:
         return [(null, "null")]
     drawn = [(best, "best")]
     second = best_model([fit for fit in result.fits if fit is not best])
-    if second is not None and best.ln_evidence - second.ln_evidence < STANDS_FROM:
+    if second is not None and best.ln_evidence - second.ln_evidence < result.system.thresholds.hint_ln_b:
         drawn.append((second, "second"))
     drawn.append((null, "null"))
     # The residuals are those of whichever explains the data better.

@@ -158,13 +158,15 @@ def sensitivity_table(sensitivity: Mapping[str, Sensitivity], untested: Mapping[
     lines = [f"{'species':<10}{'shows from':>12}{'+-':>8}   scale heights"]
     for species, found in sensitivity.items():
         if found.amplitude_scale_heights is None:
-            lines.append(f"{species:<10}{'never':>12}{'-':>8}   up to {found.largest_scale_heights:.1f} tried")
+            lines.append(
+                f"{species:<10}{'never':>12}{'-':>8}   up to {found.largest_scale_heights:.1f} tried"
+            )
         else:
             err = "-" if found.amplitude_err is None else f"{found.amplitude_err:.2f}"
             lines.append(f"{species:<10}{found.amplitude_scale_heights:>12.2f}{err:>8}")
     lines.append("")
     sentences = [found.sentence for found in sensitivity.values()]
-    sentences += [f"{species}: {reason}" for species, reason in untested.items()]
+    sentences += untested.values()
     sentences.append("From bins, errors and priors alone: nothing was fitted.")
     for sentence in sentences:
         lines += textwrap.wrap(sentence, 80, subsequent_indent="  ")

@@ -19,7 +19,7 @@ SMALLEST_SCALE_HEIGHTS = 0.01
 N_STRATA = 24
 MOST_REPEATS = 4  # noise realisations of one truth
 # A detection rate needs this many truths at and above its amplitude: fewer may all be seen by luck.
-FEWEST_TRUTHS = 20
+FEWEST_TRUTHS = 40
 BOOTSTRAPS = 100
 
 
@@ -160,9 +160,9 @@ def crossing_with_error(
     if found is None:
         return None, None
     # Noise realisations of one truth go together: they share its cloud and its shape.
-    repeated = []
+    repeated, used = [], np.unique(truth)
     for _ in range(BOOTSTRAPS):
-        times = np.bincount(rng.choice(np.unique(truth), len(np.unique(truth))), minlength=len(amplitude))
+        times = np.bincount(rng.choice(used, len(used)), minlength=len(amplitude))
         own = crossing(ln_amplitude, seen, times[truth].astype(float), chance)
         if own is not None:
             repeated.append(np.exp(own))
@@ -190,19 +190,19 @@ def crossing(ln_amplitude: np.ndarray, seen: np.ndarray, weight: np.ndarray, cha
     ln_amplitude, seen, weight = ln_amplitude[used], seen[used], weight[used]
     if not len(seen):
         return None
-    rate = isotonic_regression(seen, weights=weight).x
-    if not np.any(rate >= chance):
+    fit = isotonic_regression(seen, weights=weight)
+    if fit.x[-1] < chance:
         return None
     # Between the centres of two steps the rate is taken to be a line: the steps themselves are noise.
-    _, block = np.unique(np.round(rate, 12), return_inverse=True)
-    total = np.bincount(block, weight)
-    centre = np.bincount(block, weight * ln_amplitude) / total
-    height = np.bincount(block, weight * rate) / total
-    above = int(np.argmax(height >= chance - 1e-12))
+    starts = fit.blocks[:-1]
+    centre = np.add.reduceat(weight * ln_amplitude, starts) / fit.weights
+    height = fit.x[starts]
+    above = int(np.argmax(height >= chance))
     if above == 0:
         return float(ln_amplitude[0])
     place = float(np.interp(chance, height[above - 1 : above + 1], centre[above - 1 : above + 1]))
-    return place if len(np.unique(ln_amplitude[ln_amplitude >= place])) >= FEWEST_TRUTHS else None
+    n_truths = 1 + np.count_nonzero(np.diff(ln_amplitude[ln_amplitude >= place]))
+    return place if n_truths >= FEWEST_TRUTHS else None
 
 
 def _sentence(species: str, amplitude: float | None, largest: float, chance: float) -> str:

@@ -69,7 +69,7 @@ def test_demo_band_is_found_and_look_alike_is_not(demo_results):
 def test_result_holds_the_promised_names(demo_results):
     """Other programs read these names."""
     result = document(demo_results / "with_band")
-    assert result["format"] == "leadline-check-1"
+    assert result["format"] == "leadline-check-2"
     names = {"program", "spectrum", "system", "settings", "hypotheses", "comparisons", "verdict"}
     assert names <= set(result)
     assert {"file", "sha256", "n_bins"} <= set(result["spectrum"])

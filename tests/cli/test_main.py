@@ -5,6 +5,7 @@ import subprocess
 import sys
 import threading
 import types
+from pathlib import Path
 
 import pytest
 from click.testing import CliRunner
@@ -14,6 +15,7 @@ import transit
 from transit.cli.check import ProgressLine
 from transit.cli.main import COMMANDS, cli
 from transit.errors import InputFileError, SettingError
+from transit.records import Nuisances
 from transit.report import summary
 from transit.writers import FILE_NAMES
 
@@ -129,6 +131,11 @@ def test_module_runs_as_the_program():
         (*ARGUMENTS, "--depth-unit", "furlong"),
         (*ARGUMENTS, "--species", "H2O,,CO2"),
         (*ARGUMENTS, "--force"),
+        (*ARGUMENTS, "--nuisance", "offset"),
+        (*ARGUMENTS, "--nuisance", "steps"),
+        (*ARGUMENTS, "--step", "1.3,here"),
+        (*ARGUMENTS, "--covariance-unit", "furlong"),
+        (*ARGUMENTS, "--sensitivity-only", "--out", "out"),
     ],
 )
 def test_usage_errors_exit_2(run, stages, arguments):
@@ -147,7 +154,15 @@ def test_check_prints_the_summary(run, stages):
     assert result.stderr == ""
     assert stages.calls["check_spectrum"] == (
         (stages.result.spectrum, stages.result.system),
-        {"species": None, "seed": 1, "workers": 2, "quick": False, "progress": None},
+        {
+            "species": None,
+            "nuisances": Nuisances(),
+            "star_spectra": None,
+            "seed": 1,
+            "workers": 2,
+            "quick": False,
+            "progress": None,
+        },
     )
 
 
@@ -156,10 +171,15 @@ def test_check_passes_its_options_on(run, stages):
     options += ["--wavelength-unit", "nm", "--depth-unit", "radius-ratio", "--width-kind", "full"]
     options += ["--planet", "P b", "--reference", "Someone 2020", "--wavelength-column", "w"]
     options += ["--width-column", "dw", "--depth-column", "d", "--error-column", "e"]
+    options += ["--covariance", "cov.npy", "--covariance-unit", "ppm"]
+    options += ["--nuisance", "ar1, slope", "--step", "1.5,1.3", "--patchy"]
     assert run(*ARGUMENTS, *options).exit_code == 0
     settings = stages.calls["check_spectrum"][1]
     assert settings["species"] == ("H2O", "CO2")
     assert (settings["seed"], settings["workers"], settings["quick"]) == (7, 1, True)
+    assert settings["nuisances"] == Nuisances(
+        offsets=False, ar1=True, slope=True, patchy=True, step_um=(1.3, 1.5)
+    )
     (path,), keywords = stages.calls["read_depth_table"]
     assert str(path) == "table.csv"
     assert keywords["system"] is stages.result.system
@@ -173,6 +193,8 @@ def test_check_passes_its_options_on(run, stages):
         "width_column": "dw",
         "depth_column": "d",
         "error_column": "e",
+        "covariance": Path("cov.npy"),
+        "covariance_unit": "ppm",
     }
 
 
@@ -209,7 +231,7 @@ def test_writes_where_asked(run, stages, tmp_path):
     assert run(*ARGUMENTS, "--out", "out").exit_code == 0
     assert sorted(os.listdir("out")) == sorted(FILE_NAMES)
     with open("out/result.json", encoding="utf-8") as stream:
-        assert json.load(stream)["format"] == "leadline-check-1"
+        assert json.load(stream)["format"] == "leadline-check-2"
 
 
 def test_earlier_result_is_refused_before_the_work(run, stages):
@@ -350,3 +372,44 @@ def test_new_system_refuses_and_is_forced(run, tmp_path):
     assert (tmp_path / "star.toml").read_text(encoding="utf-8") == "mine"
     assert run("new-system", "star.toml", "--force").exit_code == 0
     assert "[star]" in (tmp_path / "star.toml").read_text(encoding="utf-8")
+
+
+# --- what the options of a check may hold
+
+
+def test_step_outside_the_spectrum_is_refused(run, stages):
+    """One sentence that names the range, before anything is fitted."""
+    result = run(*ARGUMENTS, "--step", "9.5")
+    assert result.exit_code == 1
+    assert "--step 9.5" in result.stderr
+    assert f"{stages.result.spectrum.wavelength_um[0]:.4g}" in result.stderr
+    assert "check_spectrum" not in stages.calls
+
+
+def test_missing_star_spectra_are_one_line(run):
+    demo = Path(__file__).parents[2] / "demo"
+    result = run(
+        "check",
+        str(demo / "with_band.csv"),
+        "--system",
+        str(demo / "system.toml"),
+        "--star-spectra",
+        "none.csv",
+    )
+    assert result.exit_code == 1
+    assert "none.csv" in result.stderr
+    assert result.stderr.count("\n") == 1
+
+
+def test_sensitivity_only_prints_a_table_and_stops(run, tmp_path):
+    """From bins, errors and priors: nothing is fitted and nothing is written."""
+    demo = Path(__file__).parents[2] / "demo"
+    result = run(
+        "check", str(demo / "with_band.csv"), "--system", str(demo / "system.toml"), "--species", "H2O,CH4,Na",
+        "--sensitivity-only",
+    )  # fmt: skip
+    assert result.exit_code == 0, result.output
+    assert "nothing was fitted" in result.stdout
+    assert [line for line in result.stdout.splitlines() if line.startswith("H2O ")]
+    assert max(map(len, result.stdout.splitlines())) <= 80
+    assert not list(tmp_path.iterdir())

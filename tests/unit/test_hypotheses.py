@@ -6,7 +6,9 @@ from transit.errors import SettingError
 from transit.hypotheses import (
     DECK_COORDINATE,
     Hypothesis,
-    columns, limb_state, noise_values,
+    columns,
+    limb_state,
+    noise_values,
     parameters,
     physical,
     sampled_hypotheses,

@@ -254,6 +254,21 @@ def test_finer_cells_change_nothing(n_bins, signal):
     assert quarter == pytest.approx(own, abs=0.02)
 
 
+@pytest.mark.parametrize("seed", range(12))
+def test_finer_cells_change_nothing_about_bases_that_imitate_bumps(seed):
+    """Random bumps of 8 to 1000 errors about bases that may also bend, or have a bump of their own."""
+    rng = np.random.default_rng([73, seed])
+    plain = spectrum_of(int(rng.choice([12, 28, 60])), 1.0, 3.0, seed=seed)
+    x = np.log(plain.wavelength_um)
+    base = flat_base(plain, [x, x**2, bump_of(plain, 1.65, 0.05)][: rng.integers(0, 4)])
+    ln_half = np.log(np.median(plain.half_width_um / plain.wavelength_um))
+    shape = bump_of(plain, 3 ** rng.uniform(), np.exp(rng.uniform(ln_half, np.log(np.log(3) / 3))))
+    height = rng.choice([8, 15, 60, 200, 1000]) / np.linalg.norm(base.whiten_template(shape))
+    white, largest = base.whiten(plain.depth + height * shape), height * rng.choice([0.7, 1.5, 4.0])
+    own, finer = (find_bump(base, plain, white, largest, f).ln_bayes_factor for f in (1.0, 2.0))
+    assert finer == pytest.approx(own, abs=0.02)
+
+
 def test_cells_cover_the_prior():
     """The prior's mass in all cells is one, and halving keeps it and the area."""
     cells = bump_cells(spectrum_of(28))

@@ -185,11 +185,10 @@ def check(
         raise click.UsageError("--sensitivity-only prints a table and writes nothing: leave out --out.")
     if "steps" in nuisances and not step_um:
         raise click.UsageError("--nuisance steps needs the wavelengths of the steps: add --step.")
-    from transit.check import check_spectrum, prepare, sensitivity_of
+    from transit.check import check_spectrum
     from transit.readers import ReadOptions, read_depth_table
     from transit.records import Nuisances
     from transit.report import summary
-    from transit.report_chances import sensitivity_table
     from transit.rivals import check_steps
     from transit.star import read_star_spectra
     from transit.system import read_system
@@ -207,6 +206,9 @@ def check(
         "star_spectra": None if star_spectra is None else read_star_spectra(star_spectra),
     }
     if sensitivity_only:
+        from transit.check import prepare, sensitivity_of
+        from transit.report_chances import sensitivity_table
+
         prepared = prepare(spectrum, system, **hypotheses)
         _print_text(sensitivity_table(sensitivity_of(prepared, seed), prepared.selection.untested))
         return
