@@ -16,9 +16,8 @@ CENTRE_STEP = 0.7  # in widths of the bump
 FEWEST_CENTRES = 60  # wide bumps too: without level and slope, little of them is left, and that changes fast
 WIDTH_RATIO = 1.25
 LARGEST_SHARE = 1 / 1000  # of the evidence in one cell: a posterior spread over a thousand cells is resolved
-# Neighbours of a sharp peak: all cells may lose this share of the highest ln B by their middle being beside it. It is
-# counted from the second number on, below which no peak is sharp. Smaller shares miss peaks about bases with several
-# free directions.
+# Share of the highest ln B (less SHARP_FROM_LN_B: weak peaks are not sharp) that a cell's middle may lose by lying
+# beside a peak in the cell. With smaller shares peaks are missed about bases with several free directions.
 MISPLACED_LOSS = 1.0
 SHARP_FROM_LN_B = 5.0
 MOST_HALVINGS = 16

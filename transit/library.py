@@ -8,20 +8,22 @@ from functools import cached_property
 
 import numpy as np
 from scipy.special import ndtri
-from scipy.stats import qmc
+from scipy.stats import norm, qmc
 
 from transit.hypotheses import Hypothesis
 from transit.likelihood import ln_gaussian_mass
 from transit.linearised import LinearBase
+from transit.mixtures import Mixture
 from transit.problem import Problem
 
+NOISE_PARAMETERS = ("ar1_coefficient", "ln_error_factor")
 MODEL_BLOCK = 512  # atmospheres computed at once
 ROW_BLOCK = 160  # simulations at once: their products with a library stay in the cache
 
 
 @dataclass(frozen=True, eq=False)
 class Library:
-    """Whitened templates, equally weighted draws from the prior of one hypothesis.
+    """Whitened templates: draws from the prior of one hypothesis, with weights.
 
     Parameters
     ----------
@@ -29,14 +31,24 @@ class Library:
     templates : ndarray of float32, shape (J, M)
         Changes of depth in units of the noise. Single precision is part of the definition: data and simulations meet
         the same rounded templates.
+    weight : ndarray of float32, shape (J,), optional
+        Of mean 1; all alike when left out.
     """
 
     name: str
     templates: np.ndarray
+    weight: np.ndarray | None = None
 
     def __getstate__(self):
         # What follows from the templates is cheap to find again in another process.
-        return {"name": self.name, "templates": self.templates}
+        return {name: self.__dict__[name] for name in self.__dataclass_fields__}
+
+    @cached_property
+    def share(self) -> np.ndarray:
+        """Weights of sum 1, shape (J,)."""
+        n_templates = len(self.templates)
+        weight = np.ones(n_templates, np.float32) if self.weight is None else self.weight
+        return weight / np.float32(n_templates)
 
     @cached_property
     def exact(self) -> np.ndarray:
@@ -115,10 +127,62 @@ def model_depths(problem: Problem, hypothesis: Hypothesis, z: np.ndarray) -> np.
     return np.concatenate(blocks)
 
 
+def atmosphere_dim(problem: Problem) -> int:
+    """Number of coordinates of temperature, deck and haze: the first ones of every atmosphere."""
+    continuum = problem.parameters(Hypothesis("continuum", ()))
+    return sum(p.name not in NOISE_PARAMETERS for p in continuum)
+
+
+def library_points(
+    problem: Problem, hypothesis: Hypothesis, n_points: int, stream: list[int], focus: Mixture | None = None
+) -> tuple[np.ndarray, np.ndarray]:
+    """Draws of a hypothesis and the weights with which they stand for its prior.
+
+    Parameters
+    ----------
+    problem : Problem
+    hypothesis : Hypothesis
+        An atmosphere.
+    n_points : int
+    stream : list of int
+        Entropy.
+    focus : Mixture, optional
+        Over temperature, deck and haze: half of the draws get theirs from it.
+
+    Returns
+    -------
+    z : ndarray, shape (J, D)
+    weight : ndarray, shape (J,)
+        Of mean 1.
+
+    Notes
+    -----
+    Prior over sampling density, 1/(1/2 + q/2p) (deterministic mixture: Owen & Zhou 2000, J. Am. Stat. Assoc. 95, 135),
+    which no draw can exceed by more than a factor of 2.
+    """
+    z = prior_points(len(problem.parameters(hypothesis)), n_points, stream)
+    if focus is None:
+        return z, np.ones(n_points)
+    n_atmosphere = atmosphere_dim(problem)
+    rng = np.random.default_rng([*stream, 6])
+    # Every other point, so that both halves stay evenly spread over the abundance.
+    moved = np.arange(1, n_points, 2)
+    z[moved, :n_atmosphere] = focus.draw(len(moved), rng)
+    ln_prior = norm.logpdf(z[:, :n_atmosphere]).sum(axis=1)
+    ln_ratio = np.minimum(focus.ln_density(z[:, :n_atmosphere]) - ln_prior, 600.0)
+    weight = 1 / (0.5 + 0.5 * np.exp(ln_ratio))
+    return z, weight / weight.mean()
+
+
 def prior_library(
-    problem: Problem, hypothesis: Hypothesis, base: LinearBase, n_templates: int, seed: int
+    problem: Problem,
+    hypothesis: Hypothesis,
+    base: LinearBase,
+    n_templates: int,
+    seed: int,
+    focus: Mixture | None = None,
 ) -> Library:
-    """Library of an atmosphere's prior draws.
+    """Library of an atmosphere's prior.
 
     Parameters
     ----------
@@ -128,17 +192,27 @@ def prior_library(
         Frame with the level taken out.
     n_templates : int
     seed : int
+    focus : Mixture, optional
+        As `library_points`. Without it a few thousand draws leave gaps wider than the noise of a precise spectrum.
 
     Returns
     -------
     Library
     """
-    z = prior_points(len(problem.parameters(hypothesis)), n_templates, [seed, name_key(hypothesis.name), 1])
-    return Library(hypothesis.name, whitened(base, model_depths(problem, hypothesis, z)))
+    z, weight = library_points(problem, hypothesis, n_templates, [seed, name_key(hypothesis.name), 1], focus)
+    templates = whitened(base, model_depths(problem, hypothesis, z))
+    return Library(hypothesis.name, templates, weight.astype(np.float32))
 
 
-def feature_library(problem: Problem, species: str, base: LinearBase, n_templates: int, seed: int) -> Library:
-    """Library of what one species adds to the continuum of the same prior draw.
+def feature_library(
+    problem: Problem,
+    species: str,
+    base: LinearBase,
+    n_templates: int,
+    seed: int,
+    focus: Mixture | None = None,
+) -> Library:
+    """Library of what one species adds to the continuum of the same draw; all alike in weight.
 
     Parameters
     ----------
@@ -146,23 +220,18 @@ def feature_library(problem: Problem, species: str, base: LinearBase, n_template
     species : str
     base : LinearBase
     n_templates, seed : int
+    focus : Mixture, optional
 
     Returns
     -------
     Library
     """
     hypothesis, bare = Hypothesis(species, (species,)), Hypothesis("continuum", ())
-    z = prior_points(len(problem.parameters(hypothesis)), n_templates, [seed, name_key(species), 2])
-    depth = model_depths(problem, hypothesis, z) - model_depths(problem, bare, without_species(problem, z))
+    z, _ = library_points(problem, hypothesis, n_templates, [seed, name_key(species), 2], focus)
+    # The atmosphere comes first among the coordinates, the noise, which no depth depends on, last.
+    continuum = z[:, : len(problem.parameters(bare))]
+    depth = model_depths(problem, hypothesis, z) - model_depths(problem, bare, continuum)
     return Library(species, whitened(base, depth))
-
-
-def without_species(problem: Problem, z: np.ndarray) -> np.ndarray:
-    """Coordinates of the continuum, shape (J, D - 1 or D), of draws of a hypothesis with one species.
-
-    The atmosphere comes first among the coordinates, then the abundance, then the noise, which no depth depends on.
-    """
-    return z[:, : len(problem.parameters(Hypothesis("continuum", ())))]
 
 
 def whitened(base: LinearBase, depths: np.ndarray) -> np.ndarray:
@@ -257,7 +326,7 @@ def library_over_flat(library: Library, mean: np.ndarray, noise: np.ndarray) -> 
     ln_like -= largest[:, None]
     np.exp(ln_like, out=ln_like)
     peak = np.repeat(top, len(noise) // len(mean)) + largest
-    return peak + np.log(ln_like.mean(axis=1, dtype=float)), 2 * peak
+    return peak + np.log((ln_like @ library.share).astype(float)), 2 * peak
 
 
 def slope_over_flat(rows: np.ndarray, edge: np.ndarray) -> tuple[np.ndarray, np.ndarray]:

@@ -15,6 +15,7 @@ from transit.hypotheses import Hypothesis, columns, physical, vmr_range
 from transit.library import (
     Library,
     Statistic,
+    atmosphere_dim,
     evaluate,
     feature_library,
     line_statistic,
@@ -23,6 +24,7 @@ from transit.library import (
     prior_library,
     whitened,
 )
+from transit.mixtures import Mixture, choose_mixture
 from transit.problem import Problem, share_model
 from transit.records import FalseAlarms, Fit
 from transit.tails import (
@@ -40,6 +42,7 @@ TABLE_LN_B = (0.0, 1.0, 2.0, 2.5, 3.0, 4.0, 5.0, 6.0, 8.0, 10.0, 12.0)
 SMALLEST_P = 1e-8
 
 N_FEATURES = 256  # templates of a species' features alone, to plant
+FOCUS_DRAWS, FOCUS_SIZES, FOCUS_WIDENING = 2000, (1, 2, 4), 1.3
 
 
 def false_alarms(
@@ -90,7 +93,8 @@ def false_alarms(
 
     Notes
     -----
-    ln B comes from a fixed library of prior draws, for the data and for the simulations alike (`library.evaluate`).
+    ln B comes from a fixed library of weighted prior draws, for the data and for the simulations alike
+    (`library.evaluate`); half of the draws lie about the fitted continuum (`continuum_focus`).
     The nulls are flat, a slope and a continuum, the latter two drawn from their posteriors (a parametric bootstrap:
     Efron & Tibshirani 1993, chapter 6). Of their p the largest is quoted.
 
@@ -106,8 +110,10 @@ def false_alarms(
             f"{n_simulations} simulations were asked for, expected at least {2 * REPEATS * N_CHUNKS} of each null."
         )
     base = line_base(problem, "flat", error_factor=error_factor, ar1=ar1)
+    focus = continuum_focus(problem, combined, seed)
     tasks = [
-        LibraryTask(problem, name, n_templates, seed, error_factor, ar1) for name in ("continuum", *species)
+        LibraryTask(problem, name, n_templates, seed, error_factor, ar1, focus)
+        for name in ("continuum", *species)
     ]
     (continuum, _), *own = run_in_order(build_libraries, tasks, executor)
     statistic = line_statistic(problem, base, continuum, tuple(library for library, _ in own))
@@ -148,16 +154,34 @@ class LibraryTask:
     seed: int
     error_factor: float
     ar1: float
+    focus: Mixture | None = None
 
 
 def build_libraries(task: LibraryTask) -> tuple[Library, Library | None]:
     """Library of a hypothesis, and for a species a smaller one of its features alone."""
     problem = share_model(task.problem)
     base = line_base(problem, "flat", error_factor=task.error_factor, ar1=task.ar1)
-    if task.name == "continuum":
-        return prior_library(problem, Hypothesis("continuum", ()), base, task.n_templates, task.seed), None
-    whole = prior_library(problem, Hypothesis(task.name, (task.name,)), base, task.n_templates, task.seed)
-    return whole, feature_library(problem, task.name, base, min(N_FEATURES, task.n_templates), task.seed)
+    is_null = task.name == "continuum"
+    hypothesis = Hypothesis(task.name, () if is_null else (task.name,))
+    whole = prior_library(problem, hypothesis, base, task.n_templates, task.seed, task.focus)
+    if is_null:
+        return whole, None
+    n_features = min(N_FEATURES, task.n_templates)
+    return whole, feature_library(problem, task.name, base, n_features, task.seed, task.focus)
+
+
+def continuum_focus(problem: Problem, combined: Mapping[str, CombinedEvidence], seed: int) -> Mixture | None:
+    """Mixture of t distributions about the posterior of the continuum; None where that was not fitted.
+
+    Species are weighed as additions to this continuum, in simulations as in the data, so that their templates have
+    to be dense there.
+    """
+    if "continuum" not in combined:
+        return None
+    rng = np.random.default_rng([seed, name_key("focus")])
+    draws = combined["continuum"].draws_z[:, : atmosphere_dim(problem)]
+    draws = draws[rng.permutation(len(draws))[:FOCUS_DRAWS]]
+    return choose_mixture(draws, np.ones(len(draws)), rng, sizes=FOCUS_SIZES).widened(FOCUS_WIDENING)
 
 
 def null_means(problem: Problem, base, fits, combined, n_means: int, seed: int) -> dict[str, np.ndarray]:
@@ -194,24 +218,25 @@ def _observed(species, observed, draws) -> dict[str, dict]:
             entry |= {"p_err": of_best_err, "p_null": of_best_null}
             entry["p_delta_chi2"] = largest_chance(best_chi2, gain)[0]
         else:
-            named, err, by_null = largest_chance(tails_of(draws, "ln_b", k), value)
+            named, err, by_null = largest_chance(tails_of(draws, "ln_b", k), value, best_ln_b)
             entry |= {"p_named": named, "p_err": err, "p_null": by_null}
-            entry["p_delta_chi2"] = largest_chance(tails_of(draws, "delta_chi2", k), gain)[0]
+            entry["p_delta_chi2"] = largest_chance(tails_of(draws, "delta_chi2", k), gain, best_chi2)[0]
         out[name] = entry
     return out
 
 
 def _table(species, draws) -> dict:
     """p and errors at the ln B of the table."""
+    of_best = tails_of(draws, "ln_b", None)
     named, named_err = {}, {}
     for k, name in enumerate(species):
-        named[name], named_err[name] = _column(tails_of(draws, "ln_b", k))
-    best, best_err = _column(tails_of(draws, "ln_b", None))
+        named[name], named_err[name] = _column(tails_of(draws, "ln_b", k), of_best)
+    best, best_err = _column(of_best, None)
     return dict(p_named=named, p_named_err=named_err, p_best_of_n=best, p_best_of_n_err=best_err)
 
 
-def _column(tails) -> tuple[np.ndarray, np.ndarray]:
-    found = np.array([largest_chance(tails, value)[:2] for value in TABLE_LN_B])
+def _column(tails, of_best) -> tuple[np.ndarray, np.ndarray]:
+    found = np.array([largest_chance(tails, value, of_best)[:2] for value in TABLE_LN_B])
     return found[:, 0], found[:, 1]
 
 

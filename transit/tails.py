@@ -189,9 +189,17 @@ class Tail:
         return float(min(by_mean.mean(), 1.0)), float(err)
 
 
-def largest_chance(tails: Mapping[str, Tail], threshold: float) -> tuple[float, float, dict[str, float]]:
-    """Largest p of several nulls, its error, and p by null."""
+def largest_chance(
+    tails: Mapping[str, Tail], threshold: float, of_best: Mapping[str, Tail] | None = None
+) -> tuple[float, float, dict[str, float]]:
+    """Largest p of several nulls, its error, and p by null.
+
+    `of_best` are the tails of the best of several, of which `tails` describes one. The best is reached at least as
+    often as one of them, which bounds p where the simulations of that one end.
+    """
     found = {name: tail.chance(threshold) for name, tail in tails.items()}
+    if of_best is not None:
+        found = {name: min(found[name], of_best[name].chance(threshold)) for name in found}
     worst = max(found, key=lambda name: found[name][0])
     return *found[worst], {name: p for name, (p, _) in found.items()}
 

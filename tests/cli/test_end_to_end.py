@@ -8,6 +8,7 @@ import shutil
 from pathlib import Path
 
 import numpy as np
+import pandas as pd
 import pytest
 from click.testing import CliRunner
 
@@ -218,3 +219,108 @@ def test_altered_opacity_table_is_refused(tmp_path, monkeypatch):
     result = run("check", DEMO / "with_band.csv", "--system", DEMO / "system.toml", "--species", "H2O")
     assert result.exit_code == 1
     assert "H2O.opacity" in result.stderr
+
+
+# --- covariance, stars and steps that cannot be used
+
+
+@pytest.fixture
+def small(tmp_path):
+    """A good table of four bins and its system file, in an empty directory."""
+    (tmp_path / "table.csv").write_text("\n".join([HEADER, *GOOD_ROWS]))
+    (tmp_path / "system.toml").write_text(SYSTEM)
+    return tmp_path
+
+
+def refusal(folder, *options):
+    """Message of a check that must be refused: one line, exit 1, nothing written."""
+    before = sorted(folder.iterdir())
+    result = run(
+        "check", folder / "table.csv", "--system", folder / "system.toml", "--species", "H2O", *options,
+        "--out", folder / "out",
+    )  # fmt: skip
+    assert result.exit_code == 1, result.output
+    assert result.stderr.count("\n") == 1, result.stderr
+    assert "Traceback" not in result.output
+    assert sorted(folder.iterdir()) == before
+    return result.stderr
+
+
+@pytest.mark.parametrize(
+    ("matrix", "words"),
+    [
+        (np.eye(3) * 1600, ("3 x 3", "4")),
+        (np.ones((4, 3)) * 1600, ("4 x 3",)),
+        (1600 * (np.eye(4) + 2 * np.eye(4)[::-1]), ("positive definite",)),
+        (1600 * np.eye(4) + np.triu(np.ones((4, 4)), 1), ("symmetric",)),
+        (1600e-6 * np.eye(4), ("factor",)),
+        (np.where(np.eye(4) > 0, np.nan, 0.0), ("finite",)),
+    ],
+    ids=["size", "not square", "indefinite", "not symmetric", "unit", "not finite"],
+)
+def test_unusable_covariance(small, matrix, words):
+    """Each fault of a matrix is told with its numbers."""
+    np.save(small / "cov.npy", matrix)
+    message = refusal(small, "--covariance", small / "cov.npy", "--covariance-unit", "ppm")
+    assert "cov.npy" in message
+    for word in words:
+        assert word in message
+
+
+def test_covariance_beside_ar1_noise(small):
+    """Both say how bins hang together; one has to go."""
+    np.save(small / "cov.npy", 1600.0 * np.eye(4))
+    message = refusal(
+        small, "--covariance", small / "cov.npy", "--covariance-unit", "ppm", "--nuisance", "ar1"
+    )
+    assert "ar1" in message
+
+
+def test_star_spectra_that_miss_the_bins(small):
+    """Spectra of the star that begin beyond the first bin."""
+    wavelength = np.linspace(1.2, 2.0, 50)
+    rows = [f"{um},1.0,2.0,3.0" for um in wavelength]
+    (small / "star.csv").write_text("\n".join(["wavelength_um,flux_4000K,flux_6091K,flux_6500K", *rows]))
+    message = refusal(small, "--star-spectra", small / "star.csv")
+    assert "1.2" in message
+    assert "um" in message
+
+
+def test_star_spectra_that_miss_the_temperatures(small):
+    """Spectra of cool stars only, for a star of 6091 K."""
+    rows = [f"{um},1.0,2.0" for um in np.linspace(0.5, 2.0, 50)]
+    (small / "star.csv").write_text("\n".join(["wavelength_um,flux_3000K,flux_3500K", *rows]))
+    message = refusal(small, "--star-spectra", small / "star.csv")
+    assert "6091" in message or "6391" in message
+    assert "K" in message
+
+
+def test_step_outside_the_table(small):
+    """The range of the spectrum is named."""
+    message = refusal(small, "--step", "1.3")
+    assert "1.3" in message
+    assert "1.16" in message
+
+
+def test_covariance_reaches_the_result(tmp_path):
+    """A common offset with a shared error changes no band; strongly correlated neighbours do change ln B."""
+    err = pd.read_csv(DEMO / "with_band.csv", comment="#")["depth_err_ppm"].to_numpy()
+    place = np.arange(len(err))
+    matrices = {
+        "white": np.diag(err**2),
+        "shared": np.diag(err**2) + 200.0**2,
+        "ar1": np.outer(err, err) * 0.6 ** np.abs(place[:, None] - place),
+    }
+    found = {}
+    for name, matrix in matrices.items():
+        np.savetxt(tmp_path / f"{name}.csv", matrix, delimiter=",")
+        result = run(
+            "check", DEMO / "with_band.csv", "--system", DEMO / "system.toml", "--species", "H2O", "--quick",
+            "--workers", 1, "--covariance", tmp_path / f"{name}.csv", "--covariance-unit", "ppm",
+            "--nuisance", "none", "--out", tmp_path / name,
+        )  # fmt: skip
+        assert result.exit_code == 0, result.output
+        comparisons = document(tmp_path / name)["comparisons"]
+        found[name] = min(c["ln_bayes_factor"] for c in comparisons if c["kind"] == "alone")
+    assert found["shared"] == pytest.approx(found["white"], abs=1.0)
+    assert abs(found["ar1"] - found["white"]) > 5

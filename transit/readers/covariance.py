@@ -23,7 +23,9 @@ _EXPECTED = "expected N x N numbers as CSV or text, a FITS image, or a .npy file
 _SYMMETRY = 1e-6  # of the two errors' product: files written in single precision differ by 1e-7
 _SMALLEST_EIGENVALUE = 1e-10  # of the correlations: below, the inverse is rounding
 _POOR_EIGENVALUE = 1e-4
-_ERROR_FACTOR = 3.0  # a diagonal further from the quoted errors is another quantity or another unit
+# A common level of a few errors belongs into a covariance; slips of the unit are factors of 100 and more in the error.
+_ERROR_FACTOR = 10.0
+_SAME_FACTOR = 3.0  # within this another unit would agree
 
 
 def read_covariance(
@@ -155,7 +157,7 @@ def _refuse_diagonal(raw, ratio, depth_err, unit, shown) -> None:
     fits = []
     for other in COVARIANCE_UNITS:
         own = float(np.median(error_to_fraction(root, root, other) / depth_err))
-        if other != unit and 1 / _ERROR_FACTOR <= own <= _ERROR_FACTOR:
+        if other != unit and 1 / _SAME_FACTOR <= own <= _SAME_FACTOR:
             fits.append(other)
     if np.allclose(np.diag(raw), 1.0, rtol=1e-6):
         advice = "A diagonal of ones is a correlation matrix: multiply row and column by the errors"

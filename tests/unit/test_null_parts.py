@@ -15,11 +15,14 @@ from transit.library import (
     evaluate,
     feature_library,
     library_over_flat,
+    library_points,
     line_statistic,
     model_depths,
+    name_key,
     prior_points,
     slope_over_flat,
 )
+from transit.mixtures import Mixture
 from transit.nulls import LeftOutTask, added_depths, false_alarms
 from transit.problem import Problem
 from transit.records import DepthSpectrum, Nuisances, System
@@ -76,6 +79,41 @@ def test_library_is_a_mean_likelihood(scale):
         flat = stats.norm.logpdf(y).sum()
         assert ln_z[k] == pytest.approx(logsumexp(by_template) - np.log(50) - flat, abs=1e-3, rel=1e-6)
         assert gain[k] == pytest.approx(2 * (by_template.max() - flat), abs=2e-3, rel=1e-6)
+
+
+def test_weighted_library_is_a_weighted_mean():
+    """scipy's logsumexp with factors, weights over sixteen powers of ten; the fall in chi-square knows no weights."""
+    rng = np.random.default_rng(2)
+    plain = random_library(rng)
+    weight = 10 ** rng.uniform(-16, 0, 50)
+    weight /= weight.mean()
+    library = Library("X", plain.templates, weight.astype(np.float32))
+    mean, noise = 2 * rng.standard_normal((8, 7)), rng.standard_normal((8, 7)).astype(np.float32)
+    ln_z, gain = library_over_flat(library, mean, noise)
+    exponent = (mean + noise) @ plain.exact.T - plain.half_square
+    np.testing.assert_allclose(ln_z, logsumexp(exponent, axis=1, b=weight / 50), atol=2e-5)
+    np.testing.assert_allclose(gain, 2 * exponent.max(axis=1), atol=2e-5)
+
+
+def test_focused_points_stand_for_the_prior():
+    """Weighted means of focused points are those of N(0, 1), and they are dense where they should be."""
+    problem = small_problem()
+    centre, width = np.array([[1.5, -1.0, 0.5, 0.0]]), 0.05
+    focus = Mixture(np.ones(1), centre, width**2 * np.eye(4)[None], 5.0)
+    z, weight = library_points(problem, Hypothesis("H2O", ("H2O",)), 4096, [1, 2], focus)
+    assert z.shape == (4096, 5)
+    assert weight.mean() == pytest.approx(1)
+    assert weight.max() < 2.1
+    for column in z.T:
+        for power, expected in ((1, 0), (2, 1), (3, 0), (4, 3)):
+            values = weight * (column**power - expected)
+            assert values.mean() == pytest.approx(0, abs=5 * values.std() / 64)
+    near = np.linalg.norm(z[:, :4] - centre, axis=1) < 4 * width
+    assert near.sum() > 1500
+    assert np.std(z[near, 4]) == pytest.approx(1, abs=0.1)  # abundances are those of the prior there as well
+    plain, even = library_points(problem, Hypothesis("H2O", ("H2O",)), 4096, [1, 2])
+    assert np.array_equal(plain[::2], z[::2])
+    assert np.all(even == 1)
 
 
 @pytest.mark.parametrize("length", [1e-3, 0.7, 30.0])
@@ -135,7 +173,7 @@ def test_templates_are_whitened_depths():
     """For independent equal errors a template's length is its rms about its mean over the error, by hand."""
     problem = small_problem()
     library = feature_library(problem, "H2O", line_base(problem, "flat"), 16, 1)
-    z = prior_points(5, 16, [1, __import__("zlib").crc32(b"H2O"), 2])
+    z = prior_points(5, 16, [1, name_key("H2O"), 2])
     with_it = model_depths(problem, Hypothesis("H2O", ("H2O",)), z)
     without = model_depths(problem, Hypothesis("continuum", ()), z[:, :4])
     expected = 12 * np.var(with_it - without, axis=1) / (100 * PPM) ** 2
