@@ -1,4 +1,4 @@
-"""Wall time, CPU time and memory of whole checks, and of one likelihood. Run by hand: python tests/benchmark.py
+"""Wall time and memory of whole checks, of the null simulations, and of one likelihood. Run by hand, see DEVELOPERS.md.
 
 Spectra are simulated: 28 bins with one species, and 207 bins from 0.5 to 5.5 um with six. Machines differ and are
 shared: compare ratios measured in one run.
@@ -9,11 +9,15 @@ from __future__ import annotations
 import argparse
 import resource
 import time
+from concurrent.futures import ProcessPoolExecutor
 
 import numpy as np
 
 from transit.check import check_spectrum
-from transit.hypotheses import Hypothesis
+from transit.evidence import SamplerSettings
+from transit.fitting import Plan, fit_hypotheses
+from transit.hypotheses import Hypothesis, sampled_hypotheses
+from transit.nulls import false_alarms
 from transit.problem import Problem, share_model
 from transit.records import System
 from transit.simulate import Truth, simulate_spectrum
@@ -51,9 +55,10 @@ def timed(label: str, **options) -> None:
         / 1e3
     )
     loose = [fit.name for fit in result.fits if not fit.sampling["converged"]]
+    stages = ", ".join(f"{name} {seconds:.1f}" for name, seconds in result.timing.items())
     print(
         f"{label:48s} {wall:7.1f} s  {calls:9d} likelihoods  {peak:5.0f} MB at most in one process  "
-        f"not converged: {', '.join(loose) or 'none'}",
+        f"not converged: {', '.join(loose) or 'none'}\n    seconds: {stages}",
         flush=True,
     )
 
@@ -75,13 +80,34 @@ def likelihood_cost() -> None:
     )
 
 
+def null_cost() -> None:
+    """Seconds of 20 000 simulations of each null with their tail, 100 bins and six species, in two processes."""
+    problem = share_model(Problem(spectrum(100, 0.55, 5.3, 120.0), SYSTEM, SPECIES, (575.0, 1380.0)))
+    with ProcessPoolExecutor(2) as executor:
+        plan = Plan(1, 1, SamplerSettings.quick(), executor)
+        fits = fit_hypotheses(problem, sampled_hypotheses(SPECIES), plan)
+        for left_out in (False, True):
+            start = time.perf_counter()
+            found = false_alarms(
+                problem, SPECIES, fits.fits, fits.combined, seed=1, executor=executor, left_out=left_out
+            )
+            wall = time.perf_counter() - start
+            more = " and of each species left out" if left_out else ""
+            print(
+                f"null, 100 bins, six species, {found.n_simulations} of each null{more}: {wall:.1f} s",
+                flush=True,
+            )
+
+
 def main() -> None:
     """Print the table."""
     parser = argparse.ArgumentParser(description=__doc__)
-    parser.add_argument("--only", choices=("small", "large", "quick", "inflated", "likelihood"))
+    parser.add_argument("--only", choices=("small", "large", "quick", "inflated", "likelihood", "null"))
     only = parser.parse_args().only
     if only in (None, "likelihood"):
         likelihood_cost()
+    if only in (None, "null"):
+        null_cost()
     if only in (None, "small"):
         timed("28 bins, one species", spectrum=spectrum(28, 1.12, 1.65, 60.0), species=("H2O",))
     if only in (None, "quick"):

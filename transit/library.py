@@ -165,8 +165,8 @@ def library_points(
         return z, np.ones(n_points)
     n_atmosphere = atmosphere_dim(problem)
     rng = np.random.default_rng([*stream, 6])
-    # Every other point, so that both halves stay evenly spread over the abundance.
-    moved = np.arange(1, n_points, 2)
+    # The first half of a Sobol sequence is as even as the whole; every other point of it would lie on one side.
+    moved = np.arange(n_points // 2, n_points)
     z[moved, :n_atmosphere] = focus.draw(len(moved), rng)
     ln_prior = norm.logpdf(z[:, :n_atmosphere]).sum(axis=1)
     ln_ratio = np.minimum(focus.ln_density(z[:, :n_atmosphere]) - ln_prior, 600.0)

@@ -31,7 +31,6 @@ from transit.tails import (
     N_CHUNKS,
     REPEATS,
     largest_chance,
-    planted_templates,
     run_in_order,
     simulate_nulls,
     tails_of,
@@ -98,7 +97,7 @@ def false_alarms(
     The nulls are flat, a slope and a continuum, the latter two drawn from their posteriors (a parametric bootstrap:
     Efron & Tibshirani 1993, chapter 6). Of their p the largest is quoted.
 
-    The far tail is reached by importance sampling: most simulations hold a planted template g on top of noise n, and
+    The far tail is reached by importance sampling: most simulations hold a planted shape g on top of noise n, and
     a simulation with e = n + g has the weight of its density without planting over that with it,
     1/[0.2 + 0.8 mean_j exp(e.g_j - |g_j|^2/2)], which is at most 5 (a defensive mixture: Hesterberg 1995,
     Technometrics 37, 185).
@@ -117,12 +116,11 @@ def false_alarms(
     ]
     (continuum, _), *own = run_in_order(build_libraries, tasks, executor)
     statistic = line_statistic(problem, base, continuum, tuple(library for library, _ in own))
-    planting = planted_templates([part for pair in own for part in pair], seed)
     data = base.whiten(problem.spectrum.depth)[None, :]
     observed = tuple(part[0] for part in evaluate(statistic, data, np.zeros((1, data.shape[1]))))
 
     means = null_means(problem, base, fits, combined, n_means * N_CHUNKS, seed)
-    draws = simulate_nulls(statistic, planting, means, seed, executor)
+    draws = simulate_nulls(statistic, [features for _, features in own], means, seed, executor)
     found = _observed(species, observed, draws)
     table = _table(species, draws)
     out = {}
@@ -295,11 +293,10 @@ def run_left_out(task: LeftOutTask) -> dict:
     statistic = Statistic((library,))
     data = base.whiten(problem.spectrum.depth)[None, :]
     observed = float(evaluate(statistic, data, np.zeros((1, data.shape[1])))[0][0, 0])
-    planting = planted_templates([library], task.seed)
     n_means = task.n_simulations // (REPEATS * N_CHUNKS) * N_CHUNKS
     means = {task.base.name: np.zeros((n_means, data.shape[1]))}
     seed = name_key(f"{task.seed} {task.species}")
-    tails = tails_of(simulate_nulls(statistic, planting, means, seed), "ln_b", 0)
+    tails = tails_of(simulate_nulls(statistic, (), means, seed), "ln_b", 0)
     named, err, by_null = largest_chance(tails, observed)
     return {"ln_bayes_factor": observed, "p_named": named, "p_err": err, "p_null": by_null}
 

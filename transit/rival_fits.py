@@ -20,10 +20,11 @@ from transit.records import Fit, Rival
 from transit.rivals import bump_rival, one_bin_rival, rivals_on, step_rival
 
 STAR_PHRASE = "unocculted spots or faculae of the star"
-# Error factors integrated over: how many, and how far they lie from the fit's, in posterior standard deviations. A
-# rival of the nulls may do with far smaller errors than they; one on the shoulders of absorbers with much the same.
-NULL_FACTORS, NULL_REACH = 24, 8.0
-ABSORBER_FACTORS, ABSORBER_REACH = 8, 4.0
+# Error factors integrated over, in posterior standard deviations of the fit's: how far they reach, and how far they are
+# apart. A rival of the nulls may do with far smaller errors than they, one on the shoulders of absorbers with much the
+# same. Equal steps of 1.3 standard deviations integrate a Gaussian to better than 1e-4.
+NULL_REACH, ABSORBER_REACH = 8.0, 4.0
+FACTOR_STEP, MOST_FACTORS = 1.3, 60
 STAR_MARGIN = 10.0
 STAR = Hypothesis("star", (), atmosphere=False, star=True)
 
@@ -174,9 +175,7 @@ def _found(problem: Problem, task: ClosedFormTask, fits: Fits) -> dict[str, tupl
     err = max(fit.ln_evidence_err for fit in own)
     ar1 = _median(own[0], "ar1_coefficient", 0.0)
     on_nulls = task.species is None
-    factors = _factor_nodes(
-        own, *(NULL_FACTORS, NULL_REACH) if on_nulls else (ABSORBER_FACTORS, ABSORBER_REACH)
-    )
+    factors = _factor_nodes(own, NULL_REACH if on_nulls else ABSORBER_REACH)
     out: dict[str, tuple] = {}
     by_rival: dict[str, list] = {}
     ln_profile = []
@@ -210,15 +209,17 @@ def _median(fit: Fit, name: str, default: float) -> float:
     return default if interval is None else interval.median
 
 
-def _factor_nodes(fits: Sequence[Fit], count: int, reach: float) -> np.ndarray:
+def _factor_nodes(fits: Sequence[Fit], reach: float) -> np.ndarray:
     """Error factors, evenly spaced in their logarithm: the prior is uniform in it."""
     intervals = [fit.parameters["error_factor"] for fit in fits if "error_factor" in fit.parameters]
     if not intervals:
         return np.ones(1)
-    far = max(np.log(i.upper / i.lower) for i in intervals) / 2 * reach
-    low = min(np.log(i.median) for i in intervals) - far
-    high = max(np.log(i.median) for i in intervals) + far
-    return np.exp(np.linspace(max(low, 0.0), high, count))
+    errors = [0.5 * np.log(i.upper / i.lower) for i in intervals]
+    medians = [np.log(i.median) for i in intervals]
+    low = max(min(medians) - reach * max(errors), 0.0)
+    high = max(medians) + reach * max(errors)
+    count = max(int(np.ceil((high - low) / (FACTOR_STEP * min(errors)))), 4)
+    return np.exp(np.linspace(low, high, min(count, MOST_FACTORS)))
 
 
 def _base(problem: Problem, fit: Fit, fits: Fits, factor: float, ar1: float) -> LinearBase:

@@ -120,7 +120,7 @@ def importance_weights(planting: Library, noise: np.ndarray) -> np.ndarray:
 
 def simulate_nulls(
     statistic: Statistic,
-    planting: Library,
+    features: Sequence[Library],
     means: Mapping[str, np.ndarray],
     seed: int,
     executor: Executor | None = None,
@@ -130,7 +130,8 @@ def simulate_nulls(
     Parameters
     ----------
     statistic : Statistic
-    planting : Library
+    features : sequence of Library
+        Shapes to plant besides those that lead from the mean of a null to the templates of a species.
     means : mapping of str to ndarray, shape (K, M)
         By the name of the null.
     seed : int
@@ -140,8 +141,12 @@ def simulate_nulls(
     -------
     dict of NullDraws by the name of the null
     """
+    planting = {
+        name: planted_templates([*(_from(own.mean(axis=0), x) for x in statistic.species), *features], seed)
+        for name, own in means.items()
+    }
     tasks = [
-        NullTask(statistic, planting, part, (seed, name_key(name), k))
+        NullTask(statistic, planting[name], part, (seed, name_key(name), k))
         for name, all_means in means.items()
         for k, part in enumerate(np.array_split(all_means, N_CHUNKS))
     ]
@@ -153,6 +158,11 @@ def simulate_nulls(
             *(np.concatenate([getattr(c, f) for c in own]) for f in ("weight", "ln_b", "delta_chi2"))
         )
     return out
+
+
+def _from(mean: np.ndarray, library: Library) -> Library:
+    """What leads from the mean of a null to each template."""
+    return Library(library.name, (library.exact - mean).astype(np.float32))
 
 
 # --- tails -------------------------------------------------------------------------------------------------

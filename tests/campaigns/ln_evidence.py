@@ -346,7 +346,7 @@ def draw(found: list[dict], path) -> None:
     axes.axhline(0, color="0.6", lw=0.8)
     axes.set_xlabel("sampled parameters")
     axes.set_ylabel("difference in ln Z")
-    axes.legend(frameon=False)
+    axes.legend(frameon=False, loc="upper left")
     path.parent.mkdir(parents=True, exist_ok=True)
     figure.savefig(path, dpi=130)
 

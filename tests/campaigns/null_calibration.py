@@ -31,7 +31,7 @@ from transit.library import (
 )
 from transit.problem import Problem
 from transit.records import DepthSpectrum, System
-from transit.tails import REPEATS, planted_templates, simulate_nulls, tails_of
+from transit.tails import REPEATS, simulate_nulls, tails_of
 from transit.units import PPM
 
 SEED = 1763
@@ -104,8 +104,7 @@ def make_bench(
     statistic = line_statistic(problem, base, continuum, own)
     n_means = n_reference // REPEATS
     means = {null: prior_means(problem, null, n_means, [SEED, name_key(null), 1]) for null in nulls}
-    planting = planted_templates((*own, *features), SEED)
-    return Bench(species, statistic, problem, simulate_nulls(statistic, planting, means, SEED))
+    return Bench(species, statistic, problem, simulate_nulls(statistic, features, means, SEED))
 
 
 @cache

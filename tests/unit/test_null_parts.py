@@ -112,7 +112,7 @@ def test_focused_points_stand_for_the_prior():
     assert near.sum() > 1500
     assert np.std(z[near, 4]) == pytest.approx(1, abs=0.1)  # abundances are those of the prior there as well
     plain, even = library_points(problem, Hypothesis("H2O", ("H2O",)), 4096, [1, 2])
-    assert np.array_equal(plain[::2], z[::2])
+    assert np.array_equal(plain[:2048], z[:2048])
     assert np.all(even == 1)
 
 
