@@ -273,7 +273,12 @@ def _with_chances(comparison: Comparison, false_alarms: FalseAlarms) -> Comparis
     """The comparison with the simulated chances that belong to it."""
     if comparison.kind == "feature":
         found = false_alarms.observed.get("", {})
-        return replace(comparison, p_best_of_n=found.get("p_best_of_n"), p_err=found.get("p_err"))
+        return replace(
+            comparison,
+            p_best_of_n=found.get("p_best_of_n"),
+            p_err=found.get("p_err"),
+            p_is_bound=found.get("p_is_bound", False),
+        )
     if comparison.kind == "alone" and comparison.best_null:
         found = false_alarms.observed.get(comparison.species, {})
     elif comparison.kind == "left_out":
@@ -287,4 +292,5 @@ def _with_chances(comparison: Comparison, false_alarms: FalseAlarms) -> Comparis
         p_best_of_n=found.get("p_best_of_n"),
         p_err=found.get("p_err"),
         p_null=dict(found.get("p_null", {})),
+        p_is_bound=found.get("p_is_bound", False),
     )

@@ -23,7 +23,12 @@ _SECOND = {"color": "#d9791e", "linestyle": (0, (5, 1.6)), "linewidth": 1.6}
 _NULL = {"color": "#74787d", "linestyle": (0, (1.2, 1.4)), "linewidth": 1.9}
 _BAND_ALPHA = {"best": 0.20, "null": 0.22}
 _MARKERS = "osD^vPX"
-_WORD_SHADES = {"present": "#12307a", "hint": "#4f6fb8", "interchangeable": "#d9791e", "confounded": "#a33b20"}
+_WORD_SHADES = {
+    "present": "#12307a",
+    "hint": "#4f6fb8",
+    "interchangeable": "#d9791e",
+    "confounded": "#a33b20",
+}
 _QUIET_SHADE = "#a9adb2"
 _WORD_BAR_POINTS, _QUIET_BAR_POINTS = 6.5, 3.0
 _CROWDED_FROM_BINS = 120

@@ -106,7 +106,9 @@ def parameters(
             Parameter("facula_contrast_k", *priors.facula_contrast_k, "K"),
         ]
         if star_grids > 1:
-            out.append(Parameter("star_grid_mix", *priors.star_grid_mix, "from one grid of stars to the other"))
+            out.append(
+                Parameter("star_grid_mix", *priors.star_grid_mix, "from one grid of stars to the other")
+            )
     if nuisances.ar1:
         out.append(Parameter("ar1_coefficient", *priors.ar1_coefficient, ""))
     if inflate or nuisances.inflation:

@@ -3,11 +3,12 @@
 from __future__ import annotations
 
 import zlib
+from collections.abc import Sequence
 from dataclasses import dataclass
 from functools import cached_property
 
 import numpy as np
-from scipy.special import ndtri
+from scipy.special import logsumexp, ndtri
 from scipy.stats import norm, qmc
 
 from transit.hypotheses import Hypothesis
@@ -134,7 +135,11 @@ def atmosphere_dim(problem: Problem) -> int:
 
 
 def library_points(
-    problem: Problem, hypothesis: Hypothesis, n_points: int, stream: list[int], focus: Mixture | None = None
+    problem: Problem,
+    hypothesis: Hypothesis,
+    n_points: int,
+    stream: list[int],
+    focuses: Sequence[Mixture] = (),
 ) -> tuple[np.ndarray, np.ndarray]:
     """Draws of a hypothesis and the weights with which they stand for its prior.
 
@@ -146,8 +151,9 @@ def library_points(
     n_points : int
     stream : list of int
         Entropy.
-    focus : Mixture, optional
-        Over temperature, deck and haze: half of the draws get theirs from it.
+    focuses : sequence of Mixture
+        Half of the draws come from these, the same number from each; a mixture with fewer dimensions than the
+        hypothesis stands for the first of them.
 
     Returns
     -------
@@ -157,21 +163,32 @@ def library_points(
 
     Notes
     -----
-    Prior over sampling density, 1/(1/2 + q/2p) (deterministic mixture: Owen & Zhou 2000, J. Am. Stat. Assoc. 95, 135),
-    which no draw can exceed by more than a factor of 2.
+    Prior over sampling density, 1/(1/2 + mean q/2p) (deterministic mixture: Owen & Zhou 2000, J. Am. Stat. Assoc. 95,
+    135), which no draw can exceed by more than a factor of 2.
     """
     z = prior_points(len(problem.parameters(hypothesis)), n_points, stream)
-    if focus is None:
+    if not focuses:
         return z, np.ones(n_points)
-    n_atmosphere = atmosphere_dim(problem)
     rng = np.random.default_rng([*stream, 6])
     # The first half of a Sobol sequence is as even as the whole; every other point of it would lie on one side.
-    moved = np.arange(n_points // 2, n_points)
-    z[moved, :n_atmosphere] = focus.draw(len(moved), rng)
-    ln_prior = norm.logpdf(z[:, :n_atmosphere]).sum(axis=1)
-    ln_ratio = np.minimum(focus.ln_density(z[:, :n_atmosphere]) - ln_prior, 600.0)
+    moved = np.array_split(np.arange(n_points // 2, n_points), len(focuses))
+    for rows, focus in zip(moved, focuses, strict=True):
+        z[rows, : focus.n_dim] = focus.draw(len(rows), rng)
+    return z, focus_weights(z, focuses)
+
+
+def focus_weights(z: np.ndarray, focuses: Sequence[Mixture], normalised: bool = True) -> np.ndarray:
+    """Weights (J,) of draws (J, D), half from the prior and half from the focuses, as in `library_points`.
+
+    Their mean is 1 over both halves, and set to 1 over the draws given unless `normalised` is False.
+    """
+    ratios = []
+    for focus in focuses:
+        own = z[:, : focus.n_dim]
+        ratios.append(focus.ln_density(own) - norm.logpdf(own).sum(axis=1))
+    ln_ratio = np.minimum(logsumexp(ratios, axis=0) - np.log(len(focuses)), 600.0)
     weight = 1 / (0.5 + 0.5 * np.exp(ln_ratio))
-    return z, weight / weight.mean()
+    return weight / weight.mean() if normalised else weight
 
 
 def prior_library(
@@ -180,7 +197,7 @@ def prior_library(
     base: LinearBase,
     n_templates: int,
     seed: int,
-    focus: Mixture | None = None,
+    focuses: Sequence[Mixture] = (),
 ) -> Library:
     """Library of an atmosphere's prior.
 
@@ -192,14 +209,16 @@ def prior_library(
         Frame with the level taken out.
     n_templates : int
     seed : int
-    focus : Mixture, optional
-        As `library_points`. Without it a few thousand draws leave gaps wider than the noise of a precise spectrum.
+    focuses : sequence of Mixture
+        As `library_points`. Without them a few thousand draws leave gaps wider than the noise of a precise spectrum.
 
     Returns
     -------
     Library
     """
-    z, weight = library_points(problem, hypothesis, n_templates, [seed, name_key(hypothesis.name), 1], focus)
+    z, weight = library_points(
+        problem, hypothesis, n_templates, [seed, name_key(hypothesis.name), 1], focuses
+    )
     templates = whitened(base, model_depths(problem, hypothesis, z))
     return Library(hypothesis.name, templates, weight.astype(np.float32))
 
@@ -210,7 +229,7 @@ def feature_library(
     base: LinearBase,
     n_templates: int,
     seed: int,
-    focus: Mixture | None = None,
+    focuses: Sequence[Mixture] = (),
 ) -> Library:
     """Library of what one species adds to the continuum of the same draw; all alike in weight.
 
@@ -220,14 +239,14 @@ def feature_library(
     species : str
     base : LinearBase
     n_templates, seed : int
-    focus : Mixture, optional
+    focuses : sequence of Mixture
 
     Returns
     -------
     Library
     """
     hypothesis, bare = Hypothesis(species, (species,)), Hypothesis("continuum", ())
-    z, _ = library_points(problem, hypothesis, n_templates, [seed, name_key(species), 2], focus)
+    z, _ = library_points(problem, hypothesis, n_templates, [seed, name_key(species), 2], focuses)
     # The atmosphere comes first among the coordinates, the noise, which no depth depends on, last.
     continuum = z[:, : len(problem.parameters(bare))]
     depth = model_depths(problem, hypothesis, z) - model_depths(problem, bare, continuum)

@@ -18,18 +18,21 @@ from transit.library import (
     atmosphere_dim,
     evaluate,
     feature_library,
+    focus_weights,
     line_statistic,
     model_depths,
     name_key,
     prior_library,
     whitened,
 )
+from transit.linearised import LinearBase
 from transit.mixtures import Mixture, choose_mixture
 from transit.problem import Problem, share_model
 from transit.records import FalseAlarms, Fit
 from transit.tails import (
     N_CHUNKS,
     REPEATS,
+    is_bound,
     largest_chance,
     run_in_order,
     simulate_nulls,
@@ -93,7 +96,7 @@ def false_alarms(
     Notes
     -----
     ln B comes from a fixed library of weighted prior draws, for the data and for the simulations alike
-    (`library.evaluate`); half of the draws lie about the fitted continuum (`continuum_focus`).
+    (`library.evaluate`); half of the draws lie about the fits of continuum and species (`posterior_focus`).
     The nulls are flat, a slope and a continuum, the latter two drawn from their posteriors (a parametric bootstrap:
     Efron & Tibshirani 1993, chapter 6). Of their p the largest is quoted.
 
@@ -109,11 +112,13 @@ def false_alarms(
             f"{n_simulations} simulations were asked for, expected at least {2 * REPEATS * N_CHUNKS} of each null."
         )
     base = line_base(problem, "flat", error_factor=error_factor, ar1=ar1)
-    focus = continuum_focus(problem, combined, seed)
-    tasks = [
-        LibraryTask(problem, name, n_templates, seed, error_factor, ar1, focus)
-        for name in ("continuum", *species)
-    ]
+    n_continuum = atmosphere_dim(problem)
+    about_continuum = posterior_focus(combined, "continuum", n_continuum, seed)
+    tasks = []
+    for name in ("continuum", *species):
+        own = () if name == "continuum" else posterior_focus(combined, name, n_continuum + 1, seed)
+        focuses = (*about_continuum, *own)
+        tasks.append(LibraryTask(problem, name, n_templates, seed, error_factor, ar1, focuses))
     (continuum, _), *own = run_in_order(build_libraries, tasks, executor)
     statistic = line_statistic(problem, base, continuum, tuple(library for library, _ in own))
     data = base.whiten(problem.spectrum.depth)[None, :]
@@ -152,7 +157,7 @@ class LibraryTask:
     seed: int
     error_factor: float
     ar1: float
-    focus: Mixture | None = None
+    focuses: tuple[Mixture, ...] = ()
 
 
 def build_libraries(task: LibraryTask) -> tuple[Library, Library | None]:
@@ -161,25 +166,44 @@ def build_libraries(task: LibraryTask) -> tuple[Library, Library | None]:
     base = line_base(problem, "flat", error_factor=task.error_factor, ar1=task.ar1)
     is_null = task.name == "continuum"
     hypothesis = Hypothesis(task.name, () if is_null else (task.name,))
-    whole = prior_library(problem, hypothesis, base, task.n_templates, task.seed, task.focus)
+    whole = prior_library(problem, hypothesis, base, task.n_templates, task.seed, task.focuses)
     if is_null:
         return whole, None
     n_features = min(N_FEATURES, task.n_templates)
-    return whole, feature_library(problem, task.name, base, n_features, task.seed, task.focus)
+    return whole, feature_library(problem, task.name, base, n_features, task.seed, task.focuses[:1])
 
 
-def continuum_focus(problem: Problem, combined: Mapping[str, CombinedEvidence], seed: int) -> Mixture | None:
-    """Mixture of t distributions about the posterior of the continuum; None where that was not fitted.
+def posterior_focus(
+    combined: Mapping[str, CombinedEvidence], name: str, n_dim: int, seed: int
+) -> tuple[Mixture, ...]:
+    """Mixture of t distributions about a posterior; empty where that was not fitted.
 
-    Species are weighed as additions to this continuum, in simulations as in the data, so that their templates have
-    to be dense there.
+    Parameters
+    ----------
+    combined : mapping of str to CombinedEvidence
+    name : str
+        Hypothesis.
+    n_dim : int
+        How many of its coordinates, counted from the first.
+    seed : int
+
+    Returns
+    -------
+    tuple of Mixture
+        One or none.
+
+    Notes
+    -----
+    Species are weighed as additions to the fitted continuum, in simulations as in the data, and the species' own fit
+    is what the data ask for: templates have to be dense at both.
     """
-    if "continuum" not in combined:
-        return None
-    rng = np.random.default_rng([seed, name_key("focus")])
-    draws = combined["continuum"].draws_z[:, : atmosphere_dim(problem)]
+    if name not in combined:
+        return ()
+    rng = np.random.default_rng([seed, name_key("focus"), name_key(name)])
+    draws = combined[name].draws_z[:, :n_dim]
     draws = draws[rng.permutation(len(draws))[:FOCUS_DRAWS]]
-    return choose_mixture(draws, np.ones(len(draws)), rng, sizes=FOCUS_SIZES).widened(FOCUS_WIDENING)
+    mixture = choose_mixture(draws, np.ones(len(draws)), rng, sizes=FOCUS_SIZES)
+    return (mixture.widened(FOCUS_WIDENING),)
 
 
 def null_means(problem: Problem, base, fits, combined, n_means: int, seed: int) -> dict[str, np.ndarray]:
@@ -212,12 +236,14 @@ def _observed(species, observed, draws) -> dict[str, dict]:
         gain = float(delta_chi2.max() if is_best else delta_chi2[k])
         of_best, of_best_err, of_best_null = largest_chance(best_ln_b, value)
         entry = {"ln_bayes_factor": value, "delta_chi2": gain, "p_best_of_n": of_best}
+        entry["p_is_bound"] = is_bound(best_ln_b, value, of_best_null)
         if is_best:
             entry |= {"p_err": of_best_err, "p_null": of_best_null}
             entry["p_delta_chi2"] = largest_chance(best_chi2, gain)[0]
         else:
             named, err, by_null = largest_chance(tails_of(draws, "ln_b", k), value, best_ln_b)
             entry |= {"p_named": named, "p_err": err, "p_null": by_null}
+            entry["p_is_bound"] = is_bound(tails_of(draws, "ln_b", k), value, by_null)
             entry["p_delta_chi2"] = largest_chance(tails_of(draws, "delta_chi2", k), gain, best_chi2)[0]
         out[name] = entry
     return out
@@ -245,7 +271,9 @@ def _column(tails, of_best) -> tuple[np.ndarray, np.ndarray]:
 class LeftOutTask:
     """What it takes to ask whether a species adds anything to the best fit without it.
 
-    `draws_z` (J, D) are posterior draws of the hypothesis without the species, `best_z` its best point.
+    `draws_z` (J, D) are posterior draws of the hypothesis without the species, `best_z` its best point; `full` is the
+    hypothesis with it, and `full_z` (K, E) are draws about its posterior that stand, with `full_weight` (K,), for its
+    prior.
     """
 
     problem: Problem
@@ -257,6 +285,9 @@ class LeftOutTask:
     seed: int
     error_factor: float
     ar1: float
+    full: Hypothesis | None = None
+    full_z: np.ndarray | None = None
+    full_weight: np.ndarray | None = None
 
 
 def _left_out_task(problem, species, name, combined, n_simulations, n_templates, seed, error_factor, ar1):
@@ -267,7 +298,16 @@ def _left_out_task(problem, species, name, combined, n_simulations, n_templates,
     # Each draw once where there are enough: with replacement some would count twice.
     replace = n_templates > len(fitted.draws_z)
     draws = rng.choice(fitted.draws_z, n_templates, replace=replace)
-    return LeftOutTask(problem, base, name, fitted.best_z, draws, n_simulations, seed, error_factor, ar1)
+    full = Hypothesis("all", tuple(species))
+    n_dim = len(problem.parameters(full))
+    focuses = posterior_focus(combined, full.name, n_dim, seed)
+    full_z = full_weight = None
+    if focuses:
+        full_z = focuses[0].draw(n_templates, rng)
+        full_weight = focus_weights(full_z, focuses, normalised=False)
+    return LeftOutTask(
+        problem, base, name, fitted.best_z, draws, n_simulations, seed, error_factor, ar1, full, full_z, full_weight
+    )  # fmt: skip
 
 
 def run_left_out(task: LeftOutTask) -> dict:
@@ -285,11 +325,14 @@ def run_left_out(task: LeftOutTask) -> dict:
     Notes
     -----
     The frame is linear about the best fit without the species; templates are what the species adds, with the
-    abundances of its prior, to posterior draws of that hypothesis.
+    abundances of its prior, to posterior draws of that hypothesis. Where the species is needed badly, what it adds to
+    a fit without it is not what it adds to one with it: half of the weight goes to templates about the posterior of
+    the full hypothesis, each with its prior density over its sampling density. Those pay for all parameters with
+    their prior, though the frame has paid for the shared ones already, so that this statistic can only be weaker.
     """
     problem = share_model(task.problem)
     base = atmosphere_base(problem, task.base, task.best_z, error_factor=task.error_factor, ar1=task.ar1)
-    library = Library(task.species, whitened(base, added_depths(problem, task)))
+    library = _left_out_library(problem, base, task)
     statistic = Statistic((library,))
     data = base.whiten(problem.spectrum.depth)[None, :]
     observed = float(evaluate(statistic, data, np.zeros((1, data.shape[1])))[0][0, 0])
@@ -298,7 +341,28 @@ def run_left_out(task: LeftOutTask) -> dict:
     seed = name_key(f"{task.seed} {task.species}")
     tails = tails_of(simulate_nulls(statistic, (), means, seed), "ln_b", 0)
     named, err, by_null = largest_chance(tails, observed)
-    return {"ln_bayes_factor": observed, "p_named": named, "p_err": err, "p_null": by_null}
+    found = {"ln_bayes_factor": observed, "p_named": named, "p_err": err, "p_null": by_null}
+    return found | {"p_is_bound": is_bound(tails, observed, by_null)}
+
+
+def _left_out_library(problem: Problem, base: LinearBase, task: LeftOutTask) -> Library:
+    """Templates of a species left out, see `run_left_out`."""
+    added = whitened(base, added_depths(problem, task))
+    if task.full_z is None:
+        return Library(task.species, added)
+    about = whitened(base, fitted_depths(problem, task.full, task.full_z) - base.depth)
+    n_added, n_about = len(added), len(about)
+    half = 0.5 * (n_added + n_about)
+    # Of the draws that the weights of `full_z` count on, those from the prior are left out: they could only add.
+    weight = np.concatenate([np.full(n_added, half / n_added), half / n_about * 0.5 * task.full_weight])
+    return Library(task.species, np.concatenate([added, about]), weight.astype(np.float32))
+
+
+def fitted_depths(problem: Problem, hypothesis: Hypothesis, z: np.ndarray) -> np.ndarray:
+    """Depths (fraction), shape (J, N), at sampler coordinates, each with the reference radius that fits the data."""
+    said = problem.predict(hypothesis, z)
+    radius = problem.likelihood.collapse(said.mean_height, said.mean_square_height).radius
+    return problem.likelihood.predicted_depth(said.mean_height, said.mean_square_height, radius)
 
 
 def added_depths(problem: Problem, task: LeftOutTask) -> np.ndarray:

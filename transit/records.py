@@ -238,7 +238,8 @@ class Comparison:
 
     The false-alarm probabilities are frequentist and stand beside ln B, never for it: `p_named` that noise reaches
     the observed ln B of this species, `p_best_of_n` that the best of all species tried does, `p_null` p_named by null
-    simulated. `p_named` is the largest of these, an upper bound; `p_err` its Monte Carlo error. They belong to
+    simulated. `p_named` is the largest of these, an upper bound; `p_err` its Monte Carlo error; with `p_is_bound` no
+    simulation reaches the observed ln B, and p is that of the largest value resolved. They belong to
     "alone" entries against the best null, to "left_out" and (p_best_of_n only) to "feature".
     """
 
@@ -256,6 +257,7 @@ class Comparison:
     p_best_of_n: float | None = None
     p_err: float | None = None
     p_null: dict[str, float] = field(default_factory=dict)
+    p_is_bound: bool = False
     counts: bool = True
 
 
@@ -307,8 +309,9 @@ class FalseAlarms:
     `ln_bayes_factor` (K,) are values of a table; `p_named` maps species to p at those values (largest of the nulls),
     `p_best_of_n` is for the best of all species; `p_named_err` and `p_best_of_n_err` are Monte Carlo errors.
     `observed` maps species to a dict with the linearised library's ln_bayes_factor of the data, delta_chi2,
-    p_named, p_best_of_n, p_err, p_null {null: p}, p_delta_chi2; key "" is the best of all. `left_out` maps species
-    to a dict with ln_bayes_factor, p_named, p_err, p_null. `error_factor` multiplied the quoted errors.
+    p_named, p_best_of_n, p_err, p_null {null: p}, p_is_bound, p_delta_chi2; key "" is the best of all. `left_out` maps
+    species to a dict with ln_bayes_factor, p_named, p_err, p_null, p_is_bound. `error_factor` multiplied the quoted
+    errors.
     `smallest_p` is the smallest that the simulation resolves: smaller ones are bounds.
     """
 

@@ -54,7 +54,7 @@ def chance_lines(result: CheckResult) -> list[str]:
     return lines
 
 
-def format_p(p: float | None, smallest_p: float) -> str:
+def format_p(p: float | None, smallest_p: float, is_bound: bool = False) -> str:
     """Text of a probability; below the smallest resolved it is a bound.
 
     Examples
@@ -66,10 +66,11 @@ def format_p(p: float | None, smallest_p: float) -> str:
         return _NONE
     if p < smallest_p:
         return f"<{_short(smallest_p, 0)}"
-    return f"{p:.2g}" if p >= 0.01 else _short(p, 1)
+    text = f"{p:.2g}" if p >= 0.01 else _short(p, 1)
+    return f"<{_short(p, 0)}" if is_bound else text
 
 
-def format_deviate(p: float | None, smallest_p: float) -> str:
+def format_deviate(p: float | None, smallest_p: float, is_bound: bool = False) -> str:
     """Text of the one-sided normal deviate of a probability."""
     if p is None or not math.isfinite(p):
         return _NONE
@@ -77,7 +78,7 @@ def format_deviate(p: float | None, smallest_p: float) -> str:
         return f">{normal_deviate(smallest_p):.1f}"
     if p >= 0.5:
         return "<0"
-    return f"{normal_deviate(p):.1f}"
+    return f"{'>' if is_bound else ''}{normal_deviate(p):.1f}"
 
 
 def _short(p: float, digits: int) -> str:
@@ -95,14 +96,15 @@ def _row(result: CheckResult, label: str, species: str | None) -> str:
     own = kinds.get("feature") if species is None else _alone(comparisons, species)
     smallest = result.false_alarms.smallest_p if result.false_alarms is not None else 0.0
     named = own.p_named if own is not None else None
-    left_out = kinds["left_out"].p_named if "left_out" in kinds else None
+    bound = own is not None and own.p_is_bound
+    left_out = kinds.get("left_out")
     rival, over = _closest_rival(result, species)
     return _ROW.format(
         label[:8],
-        format_p(named, smallest),
-        format_deviate(named, smallest),
-        format_p(own.p_best_of_n if own is not None else None, smallest),
-        format_p(left_out, smallest),
+        format_p(named, smallest, bound),
+        format_deviate(named, smallest, bound),
+        format_p(own.p_best_of_n if own is not None else None, smallest, bound),
+        format_p(left_out.p_named if left_out else None, smallest, bool(left_out and left_out.p_is_bound)),
         rival[:15],
         over,
         _sensitivity_cell(result, species),

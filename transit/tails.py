@@ -214,6 +214,12 @@ def largest_chance(
     return *found[worst], {name: p for name, (p, _) in found.items()}
 
 
+def is_bound(tails: Mapping[str, Tail], threshold: float, by_null: Mapping[str, float]) -> bool:
+    """Whether the largest p of several nulls is only a bound: no simulation resolves so large a value."""
+    worst = max(by_null, key=by_null.get)
+    return bool(threshold > tails[worst].resolved)
+
+
 def tails_of(draws: Mapping[str, NullDraws], kind: str, column: int | None) -> dict[str, Tail]:
     """Tails by null of the ln B or fall of chi-square of one species, or of the best (column None)."""
     out = {}

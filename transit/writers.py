@@ -249,6 +249,7 @@ def _comparison(comparison: Comparison) -> dict:
         "p_best_of_n": comparison.p_best_of_n,
         "p_err": comparison.p_err,
         "p_null": comparison.p_null,
+        "p_is_bound": comparison.p_is_bound,
         "counts": comparison.counts,
     }
 

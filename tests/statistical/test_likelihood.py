@@ -373,7 +373,9 @@ def test_correlation_weakens_a_step_and_sharpens_a_spike():
     extra = amplitude[:, None] * PPM * band
     zeros = np.zeros_like(extra)
     for rho, best, err in ((None, 104.6875, 23.7171), (0.5, 99.00, 26.83)):
-        chi2 = likelihood.collapse(zeros, zeros, 1.0, extra, ar1=None if rho is None else np.full(401, rho)).chi2
+        chi2 = likelihood.collapse(
+            zeros, zeros, 1.0, extra, ar1=None if rho is None else np.full(401, rho)
+        ).chi2
         curve = np.polyfit(amplitude, chi2, 2)
         assert -curve[1] / (2 * curve[0]) == pytest.approx(best, abs=0.02)
         assert 1 / np.sqrt(curve[0]) == pytest.approx(err, abs=0.01)

@@ -26,7 +26,7 @@ from transit.library import (
     prior_points,
     slope_over_flat,
 )
-from transit.nulls import TABLE_LN_B, LeftOutTask, continuum_focus, false_alarms, run_left_out
+from transit.nulls import TABLE_LN_B, LeftOutTask, false_alarms, posterior_focus, run_left_out
 from transit.problem import Problem
 from transit.records import DepthSpectrum
 from transit.sensitivity import sensitivity
@@ -236,9 +236,9 @@ def test_focus_makes_small_libraries_precise():
     # The frame takes the level out in first order only, which is worth 0.1 in a ln Z of some 3000 over flat.
     assert expected[0] == pytest.approx(direct, abs=0.3)
 
-    focus = continuum_focus(problem, {"continuum": SimpleNamespace(draws_z=z[chosen])}, 1)
+    focus = posterior_focus({"continuum": SimpleNamespace(draws_z=z[chosen])}, "continuum", 4, 1)
     off = {}
-    for name, aim in (("focused", focus), ("plain", None)):
+    for name, aim in (("focused", focus), ("plain", ())):
         off[name] = over_flat(prior_library(problem, bare, base, 1024, 1, aim), data, rows) - expected
     rms = {name: np.sqrt(np.mean(difference**2)) for name, difference in off.items()}
     assert rms["focused"] < 0.25  # the 60,000 draws themselves are worth some 300 at this precision: 0.06

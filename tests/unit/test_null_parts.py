@@ -100,7 +100,7 @@ def test_focused_points_stand_for_the_prior():
     problem = small_problem()
     centre, width = np.array([[1.5, -1.0, 0.5, 0.0]]), 0.05
     focus = Mixture(np.ones(1), centre, width**2 * np.eye(4)[None], 5.0)
-    z, weight = library_points(problem, Hypothesis("H2O", ("H2O",)), 4096, [1, 2], focus)
+    z, weight = library_points(problem, Hypothesis("H2O", ("H2O",)), 4096, [1, 2], (focus,))
     assert z.shape == (4096, 5)
     assert weight.mean() == pytest.approx(1)
     assert weight.max() < 2.1
