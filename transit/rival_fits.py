@@ -7,6 +7,7 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
+from scipy.special import logsumexp
 
 from transit.bases import atmosphere_base, line_base
 from transit.combination import CombinedEvidence, combine_runs
@@ -21,8 +22,8 @@ from transit.rivals import bump_rival, one_bin_rival, rivals_on, step_rival
 
 STAR_PHRASE = "unocculted spots or faculae of the star"
 # Error factors integrated over, in posterior standard deviations of the fit's: how far they reach, and how far they are
-# apart. A rival of the nulls may do with far smaller errors than they, one on the shoulders of absorbers with much the
-# same. Equal steps of 1.3 standard deviations integrate a Gaussian to better than 1e-4.
+# apart in the mean. A rival of the nulls may do with far smaller errors than they, one on the shoulders of absorbers
+# with much the same.
 NULL_REACH, ABSORBER_REACH = 8.0, 4.0
 FACTOR_STEP, MOST_FACTORS = 1.3, 60
 STAR_MARGIN = 10.0
@@ -174,9 +175,7 @@ def _found(problem: Problem, task: ClosedFormTask, fits: Fits) -> dict[str, tupl
     own = fits.fits
     err = max(fit.ln_evidence_err for fit in own)
     ar1 = _median(own[0], "ar1_coefficient", 0.0)
-    on_nulls = task.species is None
-    factors = _factor_nodes(own, NULL_REACH if on_nulls else ABSORBER_REACH)
-    out: dict[str, tuple] = {}
+    factors, weights = _factor_nodes(own, NULL_REACH if task.species is None else ABSORBER_REACH)
     by_rival: dict[str, list] = {}
     ln_profile = []
     for factor in factors:
@@ -184,24 +183,15 @@ def _found(problem: Problem, task: ClosedFormTask, fits: Fits) -> dict[str, tupl
         ln_profile.append([_ln_profile(base, problem.spectrum.depth) for base in bases])
         for name, found in _each_rival(problem, bases).items():
             by_rival.setdefault(name, []).append(found)
-    if len(factors) == 1:
-        for name, (found,) in by_rival.items():
-            out[name] = (found.ln_evidence, err, found)
-        return out
-    profile = np.array(ln_profile)
-    # ln of each base's evidence at a factor, scaled to the fit's own after integration over the factor.
-    profile = profile - _ln_mean_exp(profile) + np.array([fit.ln_evidence for fit in own])
+    profile = np.array(ln_profile) + np.log(weights)[:, None]
+    # Each base's evidence by factor, scaled so that its sum is the fit's own: constants and the prior cancel.
+    profile = profile - logsumexp(profile, axis=0) + np.array([fit.ln_evidence for fit in own])
+    out = {}
     for name, founds in by_rival.items():
         gains = np.array([[b.ln_bayes_factor for b in found.by_base] for found in founds])
-        ln_z = _ln_mean_exp((profile + gains).ravel())
-        best = founds[int(np.argmax(_ln_mean_exp(profile + gains, axis=1)))]
-        out[name] = (float(ln_z), err, best)
+        by_factor = logsumexp(profile + gains, axis=1) - np.log(len(own))
+        out[name] = (float(logsumexp(by_factor)), err, founds[int(np.argmax(by_factor))])
     return out
-
-
-def _ln_mean_exp(values: np.ndarray, axis: int = 0) -> np.ndarray:
-    top = values.max(axis=axis, keepdims=True)
-    return np.log(np.mean(np.exp(values - top), axis=axis)) + np.squeeze(top, axis=axis)
 
 
 def _median(fit: Fit, name: str, default: float) -> float:
@@ -209,17 +199,18 @@ def _median(fit: Fit, name: str, default: float) -> float:
     return default if interval is None else interval.median
 
 
-def _factor_nodes(fits: Sequence[Fit], reach: float) -> np.ndarray:
-    """Error factors, evenly spaced in their logarithm: the prior is uniform in it."""
+def _factor_nodes(fits: Sequence[Fit], reach: float) -> tuple[np.ndarray, np.ndarray]:
+    """Error factors and their weights: Gauss-Legendre in the logarithm, in which the prior is uniform."""
     intervals = [fit.parameters["error_factor"] for fit in fits if "error_factor" in fit.parameters]
     if not intervals:
-        return np.ones(1)
+        return np.ones(1), np.ones(1)
     errors = [0.5 * np.log(i.upper / i.lower) for i in intervals]
     medians = [np.log(i.median) for i in intervals]
     low = max(min(medians) - reach * max(errors), 0.0)
     high = max(medians) + reach * max(errors)
-    count = max(int(np.ceil((high - low) / (FACTOR_STEP * min(errors)))), 4)
-    return np.exp(np.linspace(low, high, min(count, MOST_FACTORS)))
+    count = int(np.clip(np.ceil((high - low) / (FACTOR_STEP * min(errors))), 6, MOST_FACTORS))
+    nodes, weights = np.polynomial.legendre.leggauss(count)
+    return np.exp(0.5 * (low + high) + 0.5 * (high - low) * nodes), weights
 
 
 def _base(problem: Problem, fit: Fit, fits: Fits, factor: float, ar1: float) -> LinearBase:
