@@ -131,7 +131,7 @@ def false_alarms(
     out = {}
     if left_out and len(species) > 1:
         settings = (n_simulations, max(n_templates // 2, 1), seed, error_factor, ar1)
-        tasks = [_left_out_task(problem, species, x, combined, *settings) for x in species]
+        tasks = [left_out_task(problem, species, x, combined, *settings) for x in species]
         out = dict(zip(species, run_in_order(run_left_out, tasks, executor), strict=True))
     return FalseAlarms(
         ln_bayes_factor=np.array(TABLE_LN_B),
@@ -290,7 +290,18 @@ class LeftOutTask:
     full_weight: np.ndarray | None = None
 
 
-def _left_out_task(problem, species, name, combined, n_simulations, n_templates, seed, error_factor, ar1):
+def left_out_task(
+    problem: Problem,
+    species: Sequence[str],
+    name: str,
+    combined: Mapping[str, CombinedEvidence],
+    n_simulations: int,
+    n_templates: int,
+    seed: int,
+    error_factor: float,
+    ar1: float,
+) -> LeftOutTask:
+    """Task of the species `name`, with draws from the posteriors without it and of all species."""
     others = tuple(x for x in species if x != name)
     base = Hypothesis(others[0] if len(others) == 1 else f"all-{name}", others)
     fitted = combined[base.name]
@@ -332,7 +343,7 @@ def run_left_out(task: LeftOutTask) -> dict:
     """
     problem = share_model(task.problem)
     base = atmosphere_base(problem, task.base, task.best_z, error_factor=task.error_factor, ar1=task.ar1)
-    library = _left_out_library(problem, base, task)
+    library = left_out_library(problem, base, task)
     statistic = Statistic((library,))
     data = base.whiten(problem.spectrum.depth)[None, :]
     observed = float(evaluate(statistic, data, np.zeros((1, data.shape[1])))[0][0, 0])
@@ -345,7 +356,7 @@ def run_left_out(task: LeftOutTask) -> dict:
     return found | {"p_is_bound": is_bound(tails, observed, by_null)}
 
 
-def _left_out_library(problem: Problem, base: LinearBase, task: LeftOutTask) -> Library:
+def left_out_library(problem: Problem, base: LinearBase, task: LeftOutTask) -> Library:
     """Templates of a species left out, see `run_left_out`."""
     added = whitened(base, added_depths(problem, task))
     if task.full_z is None:

@@ -15,7 +15,9 @@ from scipy import stats
 from scipy.special import logsumexp
 
 from transit.bases import atmosphere_base, line_base
+from transit.evidence import SamplerSettings
 from transit.fit_records import line_fit
+from transit.fitting import Plan, fit_hypotheses
 from transit.hypotheses import Hypothesis, sampled_hypotheses
 from transit.library import (
     Library,
@@ -26,7 +28,15 @@ from transit.library import (
     prior_points,
     slope_over_flat,
 )
-from transit.nulls import TABLE_LN_B, LeftOutTask, false_alarms, posterior_focus, run_left_out
+from transit.nulls import (
+    TABLE_LN_B,
+    LeftOutTask,
+    false_alarms,
+    left_out_library,
+    left_out_task,
+    posterior_focus,
+    run_left_out,
+)
 from transit.problem import Problem
 from transit.records import DepthSpectrum
 from transit.sensitivity import sensitivity
@@ -335,6 +345,34 @@ def test_left_out_p_is_uniform_on_the_spectra_of_its_null():
         task = LeftOutTask(again, water, "CO2", posterior.best_z, posterior.draws_z[:256], 1200, 1, 1.0, 0.0)
         p.append(run_left_out(task)["p_named"])
     assert stats.kstest(p, "uniform").pvalue > 1e-3
+
+
+def test_species_left_out_of_a_precise_spectrum():
+    """Water that the spectrum cannot do without is no false alarm; CO2 that is not there does not become one.
+
+    On spectra of the null the Bayes factor averages to no more than 1 (Markov's inequality rests on that).
+    """
+    problem = noisy_problem(SPECIES, 11, amplitude=1.0)
+    hypotheses = sampled_hypotheses(SPECIES)
+    fits = fit_hypotheses(problem, hypotheses, Plan(1, 1, SamplerSettings.quick()))
+    found = false_alarms(
+        problem, SPECIES, fits.fits, fits.combined, seed=1, n_simulations=4000, n_templates=2048
+    )
+    sampled = fits.fit("all").ln_evidence - fits.fit("CO2").ln_evidence
+    assert sampled > 20
+    # The frame is linear, and pays twice for what both hypotheses share.
+    assert 0.6 * sampled < found.left_out["H2O"]["ln_bayes_factor"] < 1.2 * sampled
+    assert found.left_out["H2O"]["p_named"] < 1e-8
+    assert found.left_out["CO2"]["p_named"] > 0.01
+    alone = min(fits.fit("H2O").ln_evidence - fit.ln_evidence for fit in fits.fits if not fit.species)
+    assert found.observed["H2O"]["ln_bayes_factor"] == pytest.approx(alone, abs=0.05 * alone + 1)
+
+    task = left_out_task(problem, SPECIES, "H2O", fits.combined, 4000, 512, 1, 1.0, 0.0)
+    base = atmosphere_base(problem, task.base, task.best_z)
+    noise = np.random.default_rng(12).standard_normal((20_000, len(base.transform))).astype(np.float32)
+    zero = np.zeros((1, noise.shape[1]))
+    ratio = np.exp(evaluate(Statistic((left_out_library(problem, base, task),)), zero, noise)[0][:, 0])
+    assert ratio.mean() < 1 + 4 * ratio.std() / np.sqrt(len(ratio))
 
 
 def test_sensitivity_is_what_counting_finds():
