@@ -272,8 +272,8 @@ class LeftOutTask:
     """What it takes to ask whether a species adds anything to the best fit without it.
 
     `draws_z` (J, D) are posterior draws of the hypothesis without the species, `best_z` its best point; `full` is the
-    hypothesis with it, and `full_z` (K, E) are draws about its posterior that stand, with `full_weight` (K,), for its
-    prior.
+    hypothesis with it, and `full_z` (K, E) are draws of its posterior that stand, with `full_weight` (K,), for the
+    prior of the abundance.
     """
 
     problem: Problem
@@ -310,12 +310,13 @@ def left_out_task(
     replace = n_templates > len(fitted.draws_z)
     draws = rng.choice(fitted.draws_z, n_templates, replace=replace)
     full = Hypothesis("all", tuple(species))
-    n_dim = len(problem.parameters(full))
-    focuses = posterior_focus(combined, full.name, n_dim, seed)
     full_z = full_weight = None
-    if focuses:
-        full_z = focuses[0].draw(n_templates, rng)
-        full_weight = focus_weights(full_z, focuses, normalised=False)
+    place = [p.name for p in problem.parameters(full)].index(f"log10_vmr_{name}")
+    if full.name in combined:
+        n_dim = len(problem.parameters(full))
+        full_z = rng.choice(combined[full.name].draws_z, n_templates, replace=replace)[:, :n_dim]
+        about = choose_mixture(full_z[:, [place]], np.ones(n_templates), rng, sizes=FOCUS_SIZES)
+        full_weight = focus_weights(full_z[:, [place]], (about.widened(FOCUS_WIDENING),), normalised=False)
     return LeftOutTask(
         problem, base, name, fitted.best_z, draws, n_simulations, seed, error_factor, ar1, full, full_z, full_weight
     )  # fmt: skip
@@ -337,9 +338,9 @@ def run_left_out(task: LeftOutTask) -> dict:
     -----
     The frame is linear about the best fit without the species; templates are what the species adds, with the
     abundances of its prior, to posterior draws of that hypothesis. Where the species is needed badly, what it adds to
-    a fit without it is not what it adds to one with it: half of the weight goes to templates about the posterior of
-    the full hypothesis, each with its prior density over its sampling density. Those pay for all parameters with
-    their prior, though the frame has paid for the shared ones already, so that this statistic can only be weaker.
+    a fit without it is not what it adds to one with it: half of the weight goes to posterior draws of the full
+    hypothesis, each with the prior density of the abundance over its posterior density. All other parameters are paid
+    for by the frame, in which they move freely within their priors.
     """
     problem = share_model(task.problem)
     base = atmosphere_base(problem, task.base, task.best_z, error_factor=task.error_factor, ar1=task.ar1)
@@ -364,7 +365,7 @@ def left_out_library(problem: Problem, base: LinearBase, task: LeftOutTask) -> L
     about = whitened(base, fitted_depths(problem, task.full, task.full_z) - base.depth)
     n_added, n_about = len(added), len(about)
     half = 0.5 * (n_added + n_about)
-    # Of the draws that the weights of `full_z` count on, those from the prior are left out: they could only add.
+    # The weights of `full_z` count on as many draws from the prior, which are left out: they could only add.
     weight = np.concatenate([np.full(n_added, half / n_added), half / n_about * 0.5 * task.full_weight])
     return Library(task.species, np.concatenate([added, about]), weight.astype(np.float32))
 

@@ -5,8 +5,10 @@ Run by hand from the folder that holds `transit` and `tests`; it may be broken o
     OMP_NUM_THREADS=1 PYTHONPATH=.:tests python -m campaigns.pipeline_nulls --out FILE.jsonl --figure FILE.png
 
 Sixty flat spectra with noise are fitted as a check fits them (two seeds at standard settings), and the same ln B are
-computed from the library of prior draws, on which p rests. The two must agree within the sampler's errors and the
-library's own Monte Carlo error, and the p that the null distribution gives to the sampled ln B must be uniform.
+computed from a library of plain prior draws. The two must agree within the sampler's errors and the library's own Monte
+Carlo error, and the p that the null distribution gives to the sampled ln B must be uniform. Each spectrum also gets the
+p that a check would report, whose templates and nulls rest on the fits of that very spectrum: those against a flat line
+must be uniform as well, the largest of the nulls not smaller.
 """
 
 import time
@@ -22,6 +24,7 @@ from transit.evidence import SamplerSettings
 from transit.fitting import Plan, fit_hypotheses
 from transit.hypotheses import sampled_hypotheses
 from transit.library import evaluate
+from transit.nulls import false_alarms
 from transit.problem import Problem
 from transit.records import DepthSpectrum
 from transit.tails import largest_chance, tails_of
@@ -32,6 +35,7 @@ SEED = 20070601
 SPECIES = ("H2O", "CH4")
 SPAN_UM = (1.1, 1.8)
 N_REFERENCE = 40_000
+N_OWN = 8_000  # simulations of each null for a spectrum's own p
 SMALLEST_P = 0.01  # of the test for uniform p
 
 
@@ -65,11 +69,16 @@ def run_flat(number: int, settings: SamplerSettings | None = None, n_runs: int =
     sampled = {x: fits.fit(x).ln_evidence - null for x in SPECIES}
     data = line_base(bench().problem, "flat").whiten(problem.spectrum.depth)[None, :]
     ln_b = evaluate(bench().statistic, data, np.zeros_like(data))[0][0]
+    alarms = false_alarms(
+        problem, SPECIES, fits.fits, fits.combined, seed=SEED + number, n_simulations=N_OWN, left_out=False
+    )
     return {
         "case": number,
         "sampled": sampled,
         "err": {x: fits.fit(x).ln_evidence_err for x in SPECIES},
         "library": dict(zip(SPECIES, map(float, ln_b), strict=True)),
+        "own_flat": {x: alarms.observed[x]["p_null"]["flat"] for x in SPECIES},
+        "own_quoted": {x: alarms.observed[x]["p_named"] for x in SPECIES},
         "seconds": time.perf_counter() - start,
     }
 
@@ -97,6 +106,13 @@ def statistics(found: list[dict]) -> dict:
         "mean": float(difference.mean()),
         "rms": float(np.sqrt(np.mean(difference**2))),
         "p_ks": {name: float(kstest(p, "uniform").pvalue) for name, p in p_sampled.items()},
+        "own_p_ks": {
+            x: float(kstest([record["own_flat"][x] for record in found], "uniform").pvalue) for x in SPECIES
+        },
+        "quoted_below": {
+            level: float(np.mean([record["own_quoted"][x] < level for record in found for x in SPECIES]))
+            for level in (0.5, 0.2, 0.1)
+        },
         "largest_p_ratio": float(
             max(np.exp(np.abs(np.log(p_sampled[name] / p_library[name]))).max() for name in p_sampled)
         ),
@@ -111,6 +127,10 @@ def print_table(found: list[dict]) -> None:
     for name, p in probabilities(found, "sampled").items():
         shares = ", ".join(f"{np.mean(p < level):.2f} below {level:g}" for level in (0.5, 0.2, 0.1))
         print(f"{name or 'best':5} {shares}; p of being uniform {result['p_ks'][name]:.2f}")
+    for name, p in result["own_p_ks"].items():
+        print(f"{name:5} own p against a flat line, p of being uniform {p:.2f}")
+    shares = ", ".join(f"{share:.2f} below {level:g}" for level, share in result["quoted_below"].items())
+    print(f"quoted p of both: {shares}")
     print(f"p of sampled and library ln B differ by a factor {result['largest_p_ratio']:.2f} at most")
 
 
