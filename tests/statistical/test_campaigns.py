@@ -4,7 +4,7 @@ import json
 
 import numpy as np
 import pytest
-from campaigns import coverage, ln_evidence, records
+from campaigns import coverage, ln_evidence, pipeline_nulls, records
 from scipy.special import ndtr
 from scipy.stats import binom
 
@@ -139,3 +139,34 @@ def test_coverage_statistics_notice_wrong_widths(width, good):
     low, high = coverage.COVERAGE_RANGE
     passes = low <= row["coverage"] <= high and min(row["p_ks"], row["p_chi2"]) >= coverage.SMALLEST_P
     assert passes == good
+
+
+# --- the whole pipeline on flat spectra ------------------------------------------------------------------------------
+
+
+def test_sampled_and_library_ln_b_agree_on_flat_spectra():
+    """Two flat spectra: the sampler's ln B are those of the library of prior draws, and so are their p."""
+    found = [pipeline_nulls.run_flat(number, SamplerSettings.quick(), n_runs=1) for number in range(2)]
+    result = pipeline_nulls.statistics(found)
+    assert result["rms"] < 0.15  # one quick run has errors of some 0.05, the library of 0.03
+    assert result["largest_p_ratio"] < 1.6
+    for record in found:
+        for name in pipeline_nulls.SPECIES:
+            assert record["own_quoted"][name] >= record["own_flat"][name]
+
+
+def test_pipeline_statistics_notice_an_offset():
+    """ln B that are too large by 3 give p that are not uniform."""
+    draws = pipeline_nulls.bench().reference["flat"].ln_b[:60, 0]
+    found = [
+        {
+            "sampled": dict(zip(pipeline_nulls.SPECIES, row + 3.0, strict=True)),
+            "library": dict(zip(pipeline_nulls.SPECIES, row, strict=True)),
+            "own_flat": dict.fromkeys(pipeline_nulls.SPECIES, 0.5),
+            "own_quoted": dict.fromkeys(pipeline_nulls.SPECIES, 0.5),
+        }
+        for row in draws
+    ]
+    result = pipeline_nulls.statistics(found)
+    assert result["mean"] == pytest.approx(3.0)
+    assert max(result["p_ks"].values()) < 1e-6
