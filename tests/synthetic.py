@@ -111,11 +111,12 @@ def rival_record(
     counts: dict[str, bool] | None = None,
     ln_evidence_err: float = 0.03,
     chi2: float | None = None,
+    base: str | None = None,
 ) -> Rival:
-    """A rival on the nulls, or on the best fit without `species`."""
+    """A rival on the nulls, on the best fit without `species`, or on a base that is named."""
     return Rival(
         name=name,
-        base="null" if species is None else f"all-{species}",
+        base=base or ("null" if species is None else f"all-{species}"),
         species=species,
         ln_evidence=ln_evidence,
         ln_evidence_err=ln_evidence_err,

@@ -2,13 +2,15 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping
 
 import numpy as np
 
+from transit.combination import CombinedEvidence
 from transit.hypotheses import Hypothesis
 from transit.linearised import LinearBase, whitening
 from transit.problem import Problem
+from transit.records import Fit
 
 # Step of the finite differences in the unit normal space of the sampler. Linearised parameters have their whole
 # prior for a range, so that the slope over a tenth of a standard deviation says more than the one at a point.
@@ -101,10 +103,42 @@ def atmosphere_base(
     )
 
 
+def fitted_base(
+    problem: Problem,
+    fit: Fit,
+    combined: Mapping[str, CombinedEvidence],
+    error_factor: float | None = None,
+    ar1: float | None = None,
+) -> LinearBase:
+    """Frame about a fit, whichever kind it is.
+
+    Parameters
+    ----------
+    problem : Problem
+    fit : Fit
+        A line, or a sampled hypothesis without a star.
+    combined : mapping of str to CombinedEvidence
+        What the samplers found, by name; a fit without an entry is a line.
+    error_factor, ar1 : float, optional
+        Posterior medians of the fit (1 and 0 where it has none) when left out.
+
+    Returns
+    -------
+    LinearBase
+    """
+    factor = median_of(fit, "error_factor", 1.0) if error_factor is None else error_factor
+    rho = median_of(fit, "ar1_coefficient", 0.0) if ar1 is None else ar1
+    if fit.name not in combined:
+        return line_base(problem, fit.name, fit.ln_evidence, factor, rho)
+    hypothesis = Hypothesis(fit.name, fit.species)
+    return atmosphere_base(problem, hypothesis, combined[fit.name].best_z, fit.ln_evidence, factor, rho)
+
+
+def median_of(fit: Fit, name: str, default: float) -> float:
+    """Posterior median of a parameter, or what stands for it where the fit has none."""
+    interval = fit.parameters.get(name)
+    return default if interval is None else interval.median
+
+
 def _first(array: np.ndarray | None) -> np.ndarray | None:
     return None if array is None else array[:1]
-
-
-def residual_chi2(base: LinearBase, depths: Sequence[float]) -> float:
-    """Chi-square of depths about a base, all its directions refitted."""
-    return float(np.sum(base.whiten(np.asarray(depths)) ** 2))

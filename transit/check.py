@@ -22,10 +22,11 @@ from transit.nulls import false_alarms
 from transit.opacity import load_table
 from transit.problem import Problem, share_model
 from transit.records import CheckResult, DepthSpectrum, Fit, Nuisances, Sensitivity, System
-from transit.rival_fits import STAR, build_rivals, star_is_close, star_with_absorbers
+from transit.rival_fits import build_rivals
 from transit.sensitivity import sensitivity as find_sensitivity
 from transit.species import Selection, select_species
 from transit.star import StarInBins, StarSpectra, load_star_spectra
+from transit.star_rivals import STAR, star_is_close, star_with_absorbers
 from transit.units import JUPITER_RADIUS_M, PPM
 from transit.verdict import build_comparisons, judge
 

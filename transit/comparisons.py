@@ -146,7 +146,7 @@ def shares(models: Sequence[Fit]) -> dict[str, float]:
 
 def rival_label(rival: Rival) -> str:
     """Name of a rival among the comparisons."""
-    return rival.name if rival.species is None else f"{rival.base}+{rival.name}"
+    return rival.name if rival.base == "null" else f"{rival.base}+{rival.name}"
 
 
 def stands_on_rest(comparison: Comparison) -> bool:
@@ -159,7 +159,7 @@ def counts_against_feature(rival: Rival) -> bool:
 
     A bump inside the bands of any species is that species' feature seen without a name.
     """
-    return rival.species is None and all(rival.counts.values())
+    return rival.base == "null" and all(rival.counts.values())
 
 
 # --- between fits -------------------------------------------------------------------------------------------
@@ -229,15 +229,21 @@ def _rival_comparisons(
     groups: Sequence[tuple[Sequence[Fit], Sequence[Fit]]], fitted: Sequence[str], rivals: Sequence[Rival]
 ) -> list[Comparison]:
     """Entries for each species, then for any; `groups` are the fits and those with a star, quoted and inflated."""
+    beside = {rival.name: rival for rival in rivals if is_beside(rival)}
     entries = []
     for x in (*fitted, None):
         for rival in rivals:
-            if rival.species not in (None, x):
+            if rival.species not in (None, x) or is_beside(rival):
                 continue
             counts = counts_against_feature(rival) if x is None else rival.counts.get(x, True)
-            model, grown = (_champion(fits, with_star, x, rival) for fits, with_star in groups)
-            entries.append(_compare_rival(x, model, grown, rival, counts))
+            models = [_champion(fits, with_star, x, rival) for fits, with_star in groups]
+            entries.append(_compare_rival(x, *models, rival, beside.get(rival.name), counts))
     return entries
+
+
+def is_beside(rival: Rival) -> bool:
+    """Whether a rival stands beside all species, in one hypothesis with them, rather than against any."""
+    return rival.species is None and rival.base != "null"
 
 
 def _champion(fits: Sequence[Fit], with_star: Sequence[Fit], species: str | None, rival: Rival) -> Fit | None:
@@ -246,23 +252,36 @@ def _champion(fits: Sequence[Fit], with_star: Sequence[Fit], species: str | None
     return best_model((*own, *with_star), species)
 
 
-def _compare_rival(species, model: Fit, grown: Fit | None, rival: Rival, counts: bool) -> Comparison:
+def _compare_rival(
+    species, model: Fit, grown: Fit | None, rival: Rival, beside: Rival | None, counts: bool
+) -> Comparison:
+    """A rival and the best hypothesis with the species, which may hold the same rival beside all species.
+
+    Without the latter a bad bin would count against every species, wherever it lies.
+    """
     inflated = (None, None)
     if grown is not None and rival.ln_evidence_inflated is not None:
+        ln_z, err = grown.ln_evidence, grown.ln_evidence_err
+        if beside is not None and (beside.ln_evidence_inflated or -math.inf) > ln_z:
+            ln_z, err = beside.ln_evidence_inflated, beside.ln_evidence_inflated_err or 0.0
         inflated = (
-            float(grown.ln_evidence - rival.ln_evidence_inflated),
-            math.hypot(grown.ln_evidence_err, rival.ln_evidence_inflated_err or 0.0),
+            float(ln_z - rival.ln_evidence_inflated),
+            math.hypot(err, rival.ln_evidence_inflated_err or 0.0),
         )
+    name, chi2 = model.name, model.chi2
+    if beside is not None and beside.ln_evidence > model.ln_evidence:
+        model, name = beside, f"{beside.base}+{beside.name}"
+        chi2 = math.nan if beside.chi2 is None else beside.chi2
     ln_b, ln_b_err = difference(model, rival)
     return Comparison(
         kind="rival",
         species=species,
-        model=model.name,
+        model=name,
         against=rival_label(rival),
         best_null=False,
         ln_bayes_factor=ln_b,
         ln_bayes_factor_err=ln_b_err,
-        delta_chi2=math.nan if rival.chi2 is None else float(rival.chi2 - model.chi2),
+        delta_chi2=math.nan if rival.chi2 is None else float(rival.chi2 - chi2),
         ln_bayes_factor_inflated=inflated[0],
         ln_bayes_factor_inflated_err=inflated[1],
         counts=counts,

@@ -11,6 +11,7 @@ from transit.comparisons import (
     best_null,
     counts_against_feature,
     deciding,
+    is_beside,
     rival_label,
     stands_on_rest,
 )
@@ -157,11 +158,13 @@ def artefact_sentence(
         if rival.name not in ARTEFACTS:
             continue
         if claimed:
-            if rival.species is None or words.get(rival.species) in CLAIMING:
+            if not is_beside(rival):
                 continue
-            bases = [_without(group, rival.species) for group in (fits, inflated)]
+            bases = [
+                next((fit for fit in group if fit.name == rival.base), None) for group in (fits, inflated)
+            ]
         else:
-            if rival.species is not None:
+            if rival.base != "null":
                 continue
             bases = [best_null(group) if group else None for group in (fits, inflated)]
         value = _over(rival, *bases)
@@ -174,13 +177,6 @@ def artefact_sentence(
     ]
     opening = "Beside what is named, the spectrum" if claimed else "The spectrum"
     return f"{opening} prefers {join(texts)}."
-
-
-def _without(group: Sequence[Fit], left_out: str) -> Fit | None:
-    """The fit of all species but one; with two species it is the other one's own."""
-    everything = next((fit.species for fit in group if fit.name == "all"), ())
-    rest = {x for x in everything if x != left_out}
-    return next((fit for fit in group if rest and set(fit.species) == rest), None)
 
 
 def _over(rival: Rival, base: Fit | None, grown: Fit | None) -> float:

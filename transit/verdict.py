@@ -260,7 +260,7 @@ def _deciding_fits(
 
 def fitting_rival(fits: Sequence[Fit], rivals: Sequence[Rival], thresholds: Thresholds) -> Rival | None:
     """Likeliest rival on the nulls, where it is likelier than every fit and fits the quoted errors."""
-    known = [r for r in rivals if r.species is None and r.chi2 is not None]
+    known = [r for r in rivals if r.base == "null" and r.chi2 is not None]
     best = max(known, key=lambda rival: rival.ln_evidence, default=None)
     if best is None or best.ln_evidence < max(fit.ln_evidence for fit in fits):
         return None

@@ -17,8 +17,9 @@ from transit.linear import least_squares, linear_posterior
 from transit.linearised import LinearBase, whitening
 from transit.problem import Problem
 from transit.records import DepthSpectrum, Nuisances, System
-from transit.rival_fits import STAR, ClosedFormTask, _ln_profile, run_closed_form, without
+from transit.rival_fits import ClosedFormTask, _ln_profile, run_closed_form, without
 from transit.star import load_star_spectra
+from transit.star_rivals import STAR
 from transit.units import PPM
 
 SYSTEM = System(

@@ -526,12 +526,32 @@ def test_bad_bin_beside_a_species_is_named_and_its_band_is_not():
     # Without H2O the strongest bin of its band looks bad; with it, nothing does.
     rivals = (rival_record("one-bin", 9.0), rival_record("one-bin", 9.0, species="H2O"))
     assert "bad bin" not in verdict_of(THREE, NEEDED, rivals=rivals).sentence
-    rivals = (*rivals, rival_record("one-bin", 25.0, species="CO2"))
+    best = dict(NEEDED)["all"]
+    rivals = (*rivals, rival_record("one-bin", best + 4.0, base="all"))
     verdict = verdict_of(THREE, NEEDED, rivals=rivals)
     assert verdict.species["H2O"] == "present"
     assert (
         "Beside what is named, the spectrum prefers a single bad bin at 1.41 um (ln B 4.0" in verdict.sentence
     )
+
+
+def test_fault_elsewhere_does_not_count_against_a_species():
+    """A bad bin that the best fit wants as well leaves the species standing; one that replaces it does not."""
+    best = dict(NEEDED)["all"]
+    elsewhere = (
+        rival_record("one-bin", best + 20.0, base="all"),
+        rival_record("one-bin", best + 4.0, species="H2O"),
+    )
+    assert verdict_of(THREE, NEEDED, rivals=elsewhere).species["H2O"] == "present"
+    instead = (
+        rival_record("one-bin", best - 1.0, base="all"),
+        rival_record("one-bin", best - 1.0, species="H2O"),
+    )
+    assert verdict_of(THREE, NEEDED, rivals=instead).species["H2O"] == "confounded"
+    # For a single species the hypothesis with it and the bad bin meets the bad bin alone.
+    alone = (rival_record("one-bin", 40.0), rival_record("one-bin", 52.0, base="H2O"))
+    assert verdict_of(ONE, {"H2O": 20.0}, rivals=alone).species["H2O"] == "present"
+    assert verdict_of(ONE, {"H2O": 20.0}, rivals=alone[:1]).species["H2O"] == "confounded"
 
 
 def test_growth_of_the_errors_is_said():
