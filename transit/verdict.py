@@ -155,7 +155,7 @@ def judge(
         ),
         sentences.null_sentence(feature, fits, inflated, thresholds),
         rival_sentences.artefact_sentence(words, feature, fits, inflated, rivals, thresholds),
-        sentences.inflation_sentence(inflated, fitting_rival(fits, rivals, thresholds)),
+        sentences.inflation_sentence(inflated, fitting_rival((*fits, *inflated), rivals, thresholds)),
         sentences.convergence_sentence(
             _deciding_fits(fits, fitted, words, thresholds),
             words,
@@ -259,7 +259,7 @@ def _deciding_fits(
 
 
 def fitting_rival(fits: Sequence[Fit], rivals: Sequence[Rival], thresholds: Thresholds) -> Rival | None:
-    """Likeliest rival on the nulls, where it is likelier than every fit and fits the quoted errors."""
+    """Likeliest rival on the nulls, where it beats every fit (inflated ones too) and fits the quoted errors."""
     known = [r for r in rivals if r.base == "null" and r.chi2 is not None]
     best = max(known, key=lambda rival: rival.ln_evidence, default=None)
     if best is None or best.ln_evidence < max(fit.ln_evidence for fit in fits):
