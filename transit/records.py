@@ -266,7 +266,8 @@ class Rival:
     """An explanation other than an absorber, on the shoulders of a base hypothesis.
 
     `name` is "star", "step", "bump" or "one-bin". `base` is "null" (the rival stands on the nulls, and competes with
-    every species and with the feature) or "all-X" (on the best fit without X: it competes with `species` X only).
+    every species and with the feature), "all-X" (on the best fit without X: it competes with `species` X only), or the
+    fit of all species ("all", or the only one): it stands beside them, and then belongs to what the others must beat.
     `ln_evidence` compares with those of the fits; the inflated pair with those of the inflated fits. `counts`
     maps species to whether the rival counts against them. `phrase` names it in a sentence ("a bump at 1.25 um",
     "spots or faculae of the star"). `parameters` are medians with 68 % intervals.
