@@ -6,5 +6,5 @@ cd "$(dirname "$0")/.."
 .venv/bin/python -m pip install --quiet --disable-pip-version-check -e ".[test]"
 # One linear-algebra thread: the tests compare numbers, and threads would only fight.
 export OMP_NUM_THREADS=1 OPENBLAS_NUM_THREADS=1 MKL_NUM_THREADS=1
-# Two files at a time; what a file prepares for its tests is made once.
-exec .venv/bin/python -m pytest -n 2 --dist loadfile "$@"
+# Two processes that take work from each other: the long tests are few.
+exec .venv/bin/python -m pytest -n 2 --dist worksteal "$@"
