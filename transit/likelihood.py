@@ -61,7 +61,7 @@ class DepthLikelihood:
     is found by Newton steps and the integral over u taken as a truncated Gaussian.
 
     With AR(1) noise the correlation of two bins of one segment is rho^|i-j|, i and j counted along wavelength
-    (methods: Fortune et al. 2024, A&A 686, A89, discuss noise that is correlated in wavelength). Its whitening is a
+    (Fortune et al. 2024, A&A 686, A89, discuss noise that is correlated in wavelength). Its whitening is a
     difference of neighbours, and the directions are taken out by Woodbury's formula.
     """
 

@@ -67,8 +67,7 @@ def read_system(path) -> System:
 
     Notes
     -----
-    A missing equilibrium temperature is Teff sqrt(Rs / a) (1/4)^(1/4): albedo 0, full redistribution
-    (methods 3.13).
+    A missing equilibrium temperature is Teff sqrt(Rs / a) (1/4)^(1/4): albedo 0, full redistribution.
 
     Examples
     --------

@@ -339,7 +339,7 @@ def ar1_covariance(spectrum, rho, factor=1.0):
 @pytest.mark.parametrize("segments", [1, 3])
 @pytest.mark.parametrize("rho", [0.0, 0.3, 0.8])
 def test_ar1_noise(rho, segments):
-    """Whitening by differences of neighbours is the dense covariance (methods of AR(1): any textbook)."""
+    """Whitening by differences of neighbours is the dense covariance of its definition."""
     spectrum, mean, square = made_up(segments=segments)
     likelihood = DepthLikelihood(spectrum, MEDIAN, offset_ppm=OFFSET_PPM)
     factor = np.array([1.0, 1.3, 2.0])

@@ -60,7 +60,7 @@ def fill_half_widths(centre_um: np.ndarray, half_um: np.ndarray, segment: np.nda
     Returns
     -------
     ndarray, shape (N,)
-        Edges half-way to both neighbours in the segment, mirrored at the ends (methods 2.3); the half width
+        Edges half-way to both neighbours in the segment, mirrored at the ends; the half width
         is half the distance between the edges. A neighbour beyond a gap does not count.
     """
     filled = half_um.copy()

@@ -32,7 +32,7 @@ def read_depths(table, choice: Choice, options: ReadOptions, system):
     Returns
     -------
     depth, depth_err : ndarray, shape (N,)
-        Fractions, in file order; upper and lower errors averaged (methods 6.14).
+        Fractions, in file order; upper and lower errors averaged (Barlow 2003, physics/0306138).
     notes : list of str
 
     Raises

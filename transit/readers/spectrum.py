@@ -53,7 +53,7 @@ def read_depth_table(
     Notes
     -----
     Lower errors may be stored positive or negative; asymmetric errors are symmetrised to (upper + lower) / 2
-    (methods 6.14; Barlow 2003, physics/0306138).
+    (Barlow 2003, physics/0306138).
 
     Examples
     --------
