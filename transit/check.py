@@ -367,7 +367,6 @@ def _settings(problem: Problem, selection: Selection, seed: int, quick: bool) ->
         "quick": quick,
         "tables": tables,
         "nuisances": asdict(problem.nuisances),
-        "thresholds": asdict(problem.system.thresholds),
         "skipped": _skipped(problem, quick),
         "gravity_m_s2": problem.gravity,
         "reference_pressure_bar": 0.01,

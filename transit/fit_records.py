@@ -9,6 +9,7 @@ import numpy as np
 from scipy.special import chdtrc
 
 from transit.combination import CombinedEvidence
+from transit.comparisons import best_null
 from transit.hypotheses import Hypothesis, physical
 from transit.linear import linear_posterior
 from transit.problem import Problem
@@ -200,8 +201,7 @@ def with_fine_models(
     edges = np.geomspace(low, high, count + 1)
     fine_um = np.sqrt(edges[1:] * edges[:-1])
     with_species = sorted((fit for fit in fits if fit.species), key=lambda fit: -fit.ln_evidence)
-    null = max((fit for fit in fits if not fit.species), key=lambda fit: fit.ln_evidence)
-    wanted = {fit.name for fit in (null, *with_species[:2])}
+    wanted = {fit.name for fit in (best_null(fits), *with_species[:2])}
     by_name = {hypothesis.name: hypothesis for hypothesis in hypotheses}
     model = problem.model_on(fine_um, 0.5 * np.diff(edges)) if wanted & set(by_name) else None
     out = []
